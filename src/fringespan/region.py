@@ -1,0 +1,258 @@
+"""A region: the closed outline that is measured, and the pixels of a picture that belong to it."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import lru_cache
+from typing import Literal, cast, get_args
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fringespan.cautions import Caution
+from fringespan.exceptions import RegionError
+
+__all__ = ["SMALLEST_WIDTH_PX", "PlacedRegion", "Region", "RegionKind", "place_region"]
+
+RegionKind = Literal["polygon", "rectangle", "ellipse", "whole picture"]
+
+SMALLEST_WIDTH_PX = 24
+"""A narrower region holds too few fringes and too few spectrum bins to tell a fringe from noise."""
+
+_ELLIPSE_CORNERS = 180
+_ON_OUTLINE = 1e-9
+
+
+@dataclass(frozen=True)
+class Region:
+    """A named closed polygon in pixel coordinates.
+
+    Parameters
+    ----------
+    name : str
+        What to call it.
+    vertices_px : sequence of (float, float)
+        Corners as (row, column); pixel centres are at whole numbers. A pixel belongs to the region when its centre lies
+        inside or on the outline.
+    kind : {"polygon", "rectangle", "ellipse", "whole picture"}, optional
+        What it was drawn as.
+
+    Raises
+    ------
+    RegionError
+        If the outline has fewer than three corners, a corner that is not finite, no area, or crosses itself.
+    """
+
+    name: str
+    vertices_px: tuple[tuple[float, float], ...]
+    kind: RegionKind = "polygon"
+
+    def __post_init__(self) -> None:
+        try:
+            corners = np.asarray(self.vertices_px, dtype=float)
+        except (TypeError, ValueError):
+            raise RegionError(f"region {self.name!r}: corners must be (row, column) pairs of numbers") from None
+        if corners.ndim != 2 or corners.shape[1:] != (2,) or len(corners) < 3:
+            raise RegionError(
+                f"region {self.name!r}: an outline needs at least three (row, column) corners, got an array of shape "
+                f"{corners.shape}"
+            )
+        if not np.isfinite(corners).all():
+            raise RegionError(f"region {self.name!r}: every corner must be finite; draw it again")
+        if self.kind not in get_args(RegionKind):
+            raise RegionError(f"region {self.name!r}: kind must be one of {get_args(RegionKind)}, got {self.kind!r}")
+        object.__setattr__(self, "name", str(self.name))
+        object.__setattr__(self, "vertices_px", tuple((float(r), float(c)) for r, c in corners))
+        if self.kind in ("polygon",) and _crosses_itself(corners):
+            raise RegionError(f"region {self.name!r}: its outline crosses itself; draw it without a crossing")
+        if _area(corners) <= 0:
+            raise RegionError(f"region {self.name!r}: its outline encloses no area; draw it again")
+
+    @classmethod
+    def rectangle(cls, name: str, top: float, left: float, bottom: float, right: float) -> Region:
+        """Return the upright rectangle with these edges (rows and columns, outline included)."""
+        return cls(name, ((top, left), (top, right), (bottom, right), (bottom, left)), "rectangle")
+
+    @classmethod
+    def ellipse(
+        cls, name: str, centre: Sequence[float], semi_axes: Sequence[float], rotation_deg: float = 0.0
+    ) -> Region:
+        """Return the ellipse around `centre` (row, column).
+
+        `semi_axes` are its half widths along (rows, columns) before it is turned counter-clockwise on the screen by
+        `rotation_deg`.
+        """
+        angle = np.linspace(0, 2 * np.pi, _ELLIPSE_CORNERS, endpoint=False)
+        row, column = semi_axes[0] * np.sin(angle), semi_axes[1] * np.cos(angle)
+        turn = math.radians(rotation_deg)
+        rows = centre[0] + row * math.cos(turn) - column * math.sin(turn)
+        columns = centre[1] + row * math.sin(turn) + column * math.cos(turn)
+        return cls(name, tuple(zip(rows.tolist(), columns.tolist(), strict=True)), "ellipse")
+
+    @classmethod
+    def whole(cls, shape: Sequence[int], name: str = "whole picture") -> Region:
+        """Return the region that holds every pixel of a picture of this shape (rows, columns)."""
+        bottom, right = shape[0] - 0.5, shape[1] - 0.5
+        return cls(name, ((-0.5, -0.5), (-0.5, right), (bottom, right), (bottom, -0.5)), "whole picture")
+
+
+@dataclass(frozen=True, eq=False)
+class PlacedRegion:
+    """The pixels of one picture that belong to a region.
+
+    Parameters
+    ----------
+    rows, columns : slice
+        The rectangle of the picture that just holds them.
+    mask : ndarray of bool, shape (rows, columns), or None
+        Which pixels of that rectangle belong; None if all do.
+    cautions : tuple of Caution
+        What placing it brought to light.
+    """
+
+    rows: slice
+    columns: slice
+    mask: NDArray[np.bool_] | None
+    cautions: tuple[Caution, ...] = ()
+
+    @property
+    def shape(self) -> tuple[int, int]:
+        """Rows and columns of the rectangle."""
+        return self.rows.stop - self.rows.start, self.columns.stop - self.columns.start
+
+
+def place_region(region: Region, picture_shape: tuple[int, int]) -> PlacedRegion:
+    """Find the pixels of a picture that belong to a region.
+
+    Parameters
+    ----------
+    region : Region
+    picture_shape : (int, int)
+        Rows and columns of the picture.
+
+    Returns
+    -------
+    PlacedRegion
+
+    Raises
+    ------
+    RegionError
+        If it lies outside the picture or is less than `SMALLEST_WIDTH_PX` wide in any direction.
+    """
+    return _place(region.name, region.vertices_px, (int(picture_shape[0]), int(picture_shape[1])))
+
+
+@lru_cache(maxsize=64)
+def _place(name: str, vertices: tuple[tuple[float, float], ...], shape: tuple[int, int]) -> PlacedRegion:
+    corners = np.array(vertices)
+    low, high = corners.min(axis=0), corners.max(axis=0)
+    clipped = bool((low < -0.5).any() or (high > np.array(shape) - 0.5).any())
+    first = [max(0, math.ceil(v - _ON_OUTLINE)) for v in low]
+    last = [min(n - 1, math.floor(v + _ON_OUTLINE)) for v, n in zip(high, shape, strict=True)]
+    if first[0] > last[0] or first[1] > last[1]:
+        raise RegionError(
+            f"region {name!r}: no pixel of the picture ({shape[0]} x {shape[1]}) lies inside it; its rows run from "
+            f"{low[0]:g} to {high[0]:g}, its columns from {low[1]:g} to {high[1]:g}"
+        )
+    rows, columns = slice(first[0], last[0] + 1), slice(first[1], last[1] + 1)
+    mask: NDArray[np.bool_] | None = None
+    if not _is_upright_rectangle(corners):
+        mask = _inside(corners, rows, columns)
+        used_rows, used_columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
+        if not used_rows.size:
+            raise RegionError(f"region {name!r}: no pixel of the picture lies inside it; draw it larger")
+        r0, r1, c0, c1 = used_rows[0], used_rows[-1] + 1, used_columns[0], used_columns[-1] + 1
+        mask = np.ascontiguousarray(mask[r0:r1, c0:c1])
+        rows, columns = slice(rows.start + r0, rows.start + r1), slice(columns.start + c0, columns.start + c1)
+        mask.setflags(write=False)
+    width = _narrowest(mask) if mask is not None else min(rows.stop - rows.start, columns.stop - columns.start)
+    if width < SMALLEST_WIDTH_PX:
+        raise RegionError(
+            f"region {name!r}: {width:.0f} px across, at least {SMALLEST_WIDTH_PX} px are needed in every direction "
+            "to tell fringes from noise; draw it larger"
+        )
+    cautions = ()
+    if clipped:
+        cautions = (
+            Caution(
+                "region-clipped",
+                "note",
+                "The region reaches beyond the edge of the picture; only the part inside was measured.",
+                "Move it inside if the cut part matters.",
+            ),
+        )
+    return PlacedRegion(rows, columns, mask, cautions)
+
+
+def _is_upright_rectangle(corners: NDArray[np.float64]) -> bool:
+    if len(corners) != 4:
+        return False
+    steps = np.roll(corners, -1, axis=0) - corners
+    level = steps == 0
+    return bool((level.sum(axis=1) == 1).all() and (level[:, 0] == [level[0, 0], level[0, 1]] * 2).all())
+
+
+def _inside(corners: NDArray[np.float64], rows: slice, columns: slice) -> NDArray[np.bool_]:
+    """Rasterise by scan lines: a row is inside where it is inside just above or just below, so outlines count."""
+    height, width = rows.stop - rows.start, columns.stop - columns.start
+    start, end = corners, np.roll(corners, -1, axis=0)
+    sloped = start[:, 0] != end[:, 0]
+    start, end = start[sloped], end[sloped]
+    top, bottom = np.minimum(start[:, 0], end[:, 0]), np.maximum(start[:, 0], end[:, 0])
+    slope = (end[:, 1] - start[:, 1]) / (end[:, 0] - start[:, 0])
+    y = np.arange(rows.start, rows.stop)[:, None]
+    steps = np.zeros((height, width + 1), dtype=np.int32)
+    for crossed in ((top <= y) & (y < bottom), (top < y) & (y <= bottom)):
+        row, edge = np.nonzero(crossed)
+        x = start[edge, 1] + slope[edge] * (y[row, 0] - start[edge, 0])
+        order = np.lexsort((x, row))
+        row, x = row[order], x[order]
+        first = np.ceil(x[0::2] - _ON_OUTLINE).astype(int) - columns.start
+        last = np.floor(x[1::2] + _ON_OUTLINE).astype(int) - columns.start + 1
+        first, last = np.clip(first, 0, width), np.clip(last, 0, width)
+        some = first < last
+        np.add.at(steps, (row[0::2][some], first[some]), 1)
+        np.add.at(steps, (row[0::2][some], last[some]), -1)
+    return cast("NDArray[np.bool_]", np.cumsum(steps, axis=1)[:, :-1] > 0)
+
+
+def _narrowest(mask: NDArray[np.bool_]) -> float:
+    """Return the smallest width in pixels over all directions, from the end pixels of each row."""
+    row = np.flatnonzero(mask.any(axis=1))
+    first = mask[row].argmax(axis=1)
+    last = mask.shape[1] - 1 - mask[row, ::-1].argmax(axis=1)
+    ends = np.concatenate([np.stack([row, first], axis=1), np.stack([row, last], axis=1)])
+    angle = np.linspace(0, np.pi, 36, endpoint=False)
+    along = ends @ np.stack([np.sin(angle), np.cos(angle)])
+    # one pixel is added because a line of n pixel centres spans n - 1 steps
+    return float((np.ptp(along, axis=0) + 1).min())
+
+
+def _area(corners: NDArray[np.float64]) -> float:
+    y, x = (corners - corners[0]).T
+    return float(abs(np.dot(x, np.roll(y, -1)) - np.dot(y, np.roll(x, -1))) / 2)
+
+
+def _crosses_itself(corners: NDArray[np.float64]) -> bool:
+    """Say whether two edges that are not neighbours touch or cross."""
+    count = len(corners)
+    if count < 4:
+        return False
+    p, q = corners, np.roll(corners, -1, axis=0)
+
+    def side(a: NDArray[np.float64], b: NDArray[np.float64], c: NDArray[np.float64]) -> NDArray[np.float64]:
+        cross = (b[..., 0] - a[..., 0]) * (c[..., 1] - a[..., 1]) - (b[..., 1] - a[..., 1]) * (c[..., 0] - a[..., 0])
+        return cast("NDArray[np.float64]", np.sign(cross))
+
+    for i in range(count - 2):
+        others = np.arange(i + 2, count - (1 if i == 0 else 0))
+        if not others.size:
+            continue
+        a, b, c, d = p[i], q[i], p[others], q[others]
+        apart = side(a, b, c) * side(a, b, d) < 0
+        across = side(c, d, a) * side(c, d, b) < 0
+        if (apart & across).any():
+            return True
+    return False
