@@ -1,41 +1,62 @@
-"""The measurement of one region: its values. (The chain that makes them follows.)"""
+"""The measurement of one region: the whole chain once, from pixels to spacings."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 from fringespan.cautions import Caution
+from fringespan.lattice import PlaneLattice
+from fringespan.micrograph import Micrograph
+from fringespan.region import Region
+from fringespan.settings import MeasurementSettings
+from fringespan.spacings import PairAngle, Peak
+from fringespan.spectrum import PowerSpectrum
 
-Vector = NDArray[np.float64]
-Origin = Literal["found", "lattice point", "added by hand"]
+__all__ = ["Measurement", "measure"]
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
-class Peak:
-    """One set of fringes: the position of its peak in the spectrum and what follows from it."""
+class Measurement:
+    """What was measured in one region of a picture.
 
-    g_per_px: Vector
-    g_covariance_per_px2: Vector
-    g_per_nm: Vector | None
-    g_covariance_per_nm2: Vector | None
-    period_px: float
-    d_nm: float | None
-    d_fit_uncertainty_nm: float | None
-    d_crystal_uncertainty_nm: float | None
-    d_uncertainty_nm: float | None
-    d_lattice_nm: float | None
-    d_lattice_uncertainty_nm: float | None
-    direction_deg: float
-    direction_uncertainty_deg: float | None
-    signal_to_noise: float
-    visibility: float | None
-    two_theta_mrad: float | None
-    lattice_index: tuple[int, int] | None
-    combination_of: tuple[int, ...] | None
-    origin: Origin
-    withheld: str | None
+    Attributes
+    ----------
+    micrograph : Micrograph
+    region : Region
+    settings : MeasurementSettings
+    peaks : tuple of Peak
+        Strongest first.
+    angles : tuple of PairAngle
+        One for every pair of peaks.
+    lattice : PlaneLattice or None
+        Two-dimensional lattice fitted to the peaks.
+    crystal_outline_px : ndarray, shape (n, 2), or None
+        Corners (row, column) in the picture of the part of the region that shows the fringes.
+    crystal_extent_nm : (float, float) or None
+        Its greatest and smallest width.
+    spectrum : PowerSpectrum
+        Power spectrum that the peaks were found in.
+    cautions : tuple of Caution
+        About the region as a whole, gravest first.
+    """
+
+    micrograph: Micrograph
+    region: Region
+    settings: MeasurementSettings
+    peaks: tuple[Peak, ...]
+    angles: tuple[PairAngle, ...]
+    lattice: PlaneLattice | None
+    crystal_outline_px: NDArray[np.float64] | None
+    crystal_extent_nm: tuple[float, float] | None
+    spectrum: PowerSpectrum
     cautions: tuple[Caution, ...]
+
+
+def measure(
+    micrograph: Micrograph, region: Region | None = None, *, settings: MeasurementSettings | None = None
+) -> Measurement:
+    """Measure the lattice fringes in a region of a picture."""
+    raise NotImplementedError

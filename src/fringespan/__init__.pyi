@@ -1,0 +1,10 @@
+from fringespan.cautions import Caution as Caution
+from fringespan.exceptions import FringespanError as FringespanError
+from fringespan.micrograph import Micrograph as Micrograph
+from fringespan.region import Region as Region
+from fringespan.lattice import PlaneLattice as PlaneLattice
+from fringespan.measurement import Measurement as Measurement
+from fringespan.measurement import measure as measure
+from fringespan.settings import MeasurementSettings as MeasurementSettings
+from fringespan.spacings import PairAngle as PairAngle
+from fringespan.spacings import Peak as Peak
