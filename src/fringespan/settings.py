@@ -18,8 +18,8 @@ class MeasurementSettings:
     false_peaks_per_region : float, optional
         How many peaks a region of pure noise may show on average, between 1e-6 and 1.
     smallest_distance_bins : float, optional
-        How many spectrum bins a peak must be away from the origin, at least 2: nearer, uneven thickness and illumination
-        look like fringes.
+        How many spectrum bins a peak must be away from the origin, at least 2: nearer, uneven thickness
+        and illumination look like fringes.
 
     Raises
     ------

@@ -19,7 +19,7 @@ PeakOrigin = Literal["found", "lattice point", "added by hand"]
 class Peak:
     """One set of fringes, found as a peak of the spectrum.
 
-    Every uncertainty is a standard uncertainty (k = 1). Vectors are in (row, column) order. Fields in nm are None without
+    Every uncertainty is a standard uncertainty (k = 1). Vectors are (row, column). Fields in nm are None without
     a pixel size.
 
     Attributes
@@ -34,7 +34,7 @@ class Peak:
     d_nm : float or None
         Fringe spacing; None also where it is withheld.
     d_fit_uncertainty_nm, d_crystal_uncertainty_nm, d_uncertainty_nm : float or None
-        From what the picture itself shows; from what one picture cannot show of a small or uneven crystal; these two and
+        From what the picture itself shows; from what one picture cannot show of an uneven crystal; these two and
         the pixel size's combined (None while the pixel size's uncertainty is not stated).
     d_lattice_nm, d_lattice_uncertainty_nm : float or None
         From the two-dimensional lattice common to all peaks.
