@@ -22,8 +22,8 @@ import numpy as np
 from simulation import specimens
 from simulation.crystals import CRYSTALS, Orientation
 from simulation.files import write_ome_tiff, write_truth
-from simulation.microscope import Camera, Film, Lens, expose
-from simulation.truth import Grain, describe_grain, pixel_size
+from simulation.microscope import Camera, Film, Lens, crystal_wave, expose, expose_crystal
+from simulation.truth import Grain, describe_grain, pixel_size, whole_picture
 
 HERE = Path(__file__).parent
 SCRIPT = "sample_images/simulate.py"
@@ -68,6 +68,31 @@ def two_grains() -> None:
     }, pixel, seed)  # fmt: skip
 
 
+def gold_reference() -> None:
+    """Gold foil of known lattice, for the magnification check: the file's pixel size is wrong on purpose."""
+    seed = 20102
+    rng = np.random.default_rng(seed)
+    stated, true = (0.025, 0.025), (0.02515, 0.025275)
+    camera = Camera(true, (512, 512), 2500, dark_level=100)
+    lens = Lens(200, 0.5, 45.0, focal_spread_nm=4.0, convergence_mrad=0.15)
+    gold = CRYSTALS["au"]
+    stands = Orientation((1, 0, 0), (0, 2, 0), 27.3)
+    wave = crystal_wave(gold, ((0, 1, 0), (0, 0, 1), (1, 0, 0)), stands, 11, lens.voltage_kv)
+    shot = expose_crystal(wave, Film(3.0, contrast_rms=0.06), lens, camera, rng)
+    grain = Grain("gold foil", gold, stands, whole_picture(camera.shape), kind="whole picture",
+                  particle={"shape": "endless flat foil", "thickness_nm": round(11 * gold.cell[0], 3)})  # fmt: skip
+    _save("gold_reference", shot.picture, {
+        "description": "Single-crystal gold foil [100] 4.5 nm thick over the whole picture, to check the magnification "
+                       "with. The pixel size in the file is wrong on purpose: the true one is 0.6 % larger from row to "
+                       "row and 1.1 % larger from column to column. Simulated.",
+        "pixel_size": pixel_size(stated, true),
+        "beam": lens.described(),
+        "camera": camera.described(),
+        "film": {"material": "amorphous carbon", "contrast_rms": shot.film_contrast_rms},
+        "regions": [describe_grain(grain, shot.picture, shot.ideal, true, stated, 0.1)],
+    }, stated, seed)  # fmt: skip
+
+
 def _save(name: str, picture: np.ndarray, truth: dict[str, Any], stated: tuple[float, float], seed: int) -> None:
     file = f"{name}.ome.tif"
     write_ome_tiff(HERE / file, picture, stated)
@@ -76,7 +101,7 @@ def _save(name: str, picture: np.ndarray, truth: dict[str, Any], stated: tuple[f
     })  # fmt: skip
 
 
-PICTURES: dict[str, Callable[[], None]] = {"two_grains": two_grains}
+PICTURES: dict[str, Callable[[], None]] = {"two_grains": two_grains, "gold_reference": gold_reference}
 
 
 def main() -> None:

@@ -29,6 +29,12 @@ def polygon_mask(shape: tuple[int, int], vertices_px: np.ndarray) -> np.ndarray:
     return inside
 
 
+def whole_picture(shape: tuple[int, int]) -> np.ndarray:
+    """Return the outline of the whole picture, (row, column)."""
+    bottom, right = shape[0] - 0.5, shape[1] - 0.5
+    return np.array([[-0.5, -0.5], [-0.5, right], [bottom, right], [bottom, -0.5]])
+
+
 @dataclass(frozen=True)
 class Patch:
     """Part of a picture under a window: values times weights, and the coordinates of its rows and columns."""
