@@ -1,0 +1,1 @@
+"""Crystal structures and what they would show: reflections, absences, zone-axis patterns."""
