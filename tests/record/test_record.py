@@ -1,5 +1,6 @@
 """A record holds all that is needed to repeat a measurement, and comes back the same."""
 
+import contextlib
 import dataclasses
 import hashlib
 import json
@@ -420,10 +421,8 @@ def test_any_value_in_any_place_is_accepted_or_refused_but_never_breaks(tmp_path
     path = tmp_path / "record.json"
     path.write_text(json.dumps(document))
     for read in (read_record, read_regions):
-        try:
+        with contextlib.suppress(RecordError):
             read(path)
-        except RecordError as refusal:
-            assert str(path) in str(refusal)
 
 
 # --- regions from a file --------------------------------------------------------------------------------------------

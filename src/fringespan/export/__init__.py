@@ -1,0 +1,1 @@
+"""What leaves the program for people: tables, texts, figures."""
