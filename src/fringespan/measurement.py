@@ -7,13 +7,17 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from fringespan.cautions import Caution
+from fringespan.cautions import Caution, gravest_first
+from fringespan.exceptions import RegionError
 from fringespan.lattice import PlaneLattice
 from fringespan.micrograph import Micrograph
-from fringespan.region import Region
+from fringespan.noise import ring_background
+from fringespan.peaks.detection import detection_threshold, find_candidates
+from fringespan.peaks.joint_fit import fit_jointly
+from fringespan.region import Region, place_region
 from fringespan.settings import MeasurementSettings
-from fringespan.spacings import PairAngle, Peak
-from fringespan.spectrum import PowerSpectrum
+from fringespan.spacings import PairAngle, Peak, pair_angles, peaks_from_waves
+from fringespan.spectrum import PowerSpectrum, power_spectrum, prepare_pixels
 
 __all__ = ["Measurement", "measure"]
 
@@ -55,8 +59,61 @@ class Measurement:
     cautions: tuple[Caution, ...]
 
 
+_DEFAULT = MeasurementSettings()
+
+
 def measure(
     micrograph: Micrograph, region: Region | None = None, *, settings: MeasurementSettings | None = None
 ) -> Measurement:
-    """Measure the lattice fringes in a region of a picture."""
-    raise NotImplementedError
+    """Measure the lattice fringes in a region of a picture.
+
+    Parameters
+    ----------
+    micrograph : Micrograph
+    region : Region, optional
+        Default: the whole picture.
+    settings : MeasurementSettings, optional
+
+    Returns
+    -------
+    Measurement
+
+    Raises
+    ------
+    RegionError
+        If the region lies outside the picture, is too small, or all its pixels are equal.
+    """
+    settings = settings or _DEFAULT
+    region = region or Region.whole(micrograph.shape)
+    placed = place_region(region, micrograph.shape)
+    pixels = prepare_pixels(micrograph.crop(placed.rows, placed.columns), placed.footprint)
+    spectrum, pixels = power_spectrum(pixels)
+    if pixels.sigma == 0:
+        raise RegionError(f"region {region.name!r}: all its pixels are equal; draw it where the picture shows something")
+    size = micrograph.pixel_size_nm
+    background = ring_background(spectrum, 1.0 if size is None else round(size[1] / size[0], 3))
+    threshold = detection_threshold(placed.footprint.count, settings.false_peaks_per_region)
+    candidates = find_candidates(
+        spectrum,
+        background,
+        placed.footprint,
+        threshold=threshold,
+        smallest_distance_bins=settings.smallest_distance_bins,
+    )
+    # the density is itself an estimate from m samples: F law instead of the exponential one
+    limits = candidates.samples * np.expm1(threshold / candidates.samples)
+    fit, kept = fit_jointly(pixels, candidates.frequency, candidates.density, limits)
+    peaks = peaks_from_waves(micrograph, placed, fit)
+    cautions: list[Caution] = [*micrograph.cautions, *placed.cautions]
+    return Measurement(
+        micrograph=micrograph,
+        region=region,
+        settings=settings,
+        peaks=peaks,
+        angles=pair_angles(micrograph, peaks),
+        lattice=None,
+        crystal_outline_px=None,
+        crystal_extent_nm=None,
+        spectrum=spectrum,
+        cautions=gravest_first(cautions),
+    )

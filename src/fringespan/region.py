@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from fringespan.cautions import Caution
 from fringespan.exceptions import RegionError
 
-__all__ = ["SMALLEST_WIDTH_PX", "PlacedRegion", "Region", "RegionKind", "place_region"]
+__all__ = ["SMALLEST_WIDTH_PX", "Footprint", "PlacedRegion", "Region", "RegionKind", "place_region", "rectangle_footprint"]
 
 RegionKind = Literal["polygon", "rectangle", "ellipse", "whole picture"]
 
@@ -99,6 +99,44 @@ class Region:
 
 
 @dataclass(frozen=True, eq=False)
+class Footprint:
+    """Which pixels of a rectangle a region covers, wherever in the picture that rectangle lies.
+
+    Regions that were only moved by whole pixels share one footprint object, so that whatever depends on the outline
+    alone can be kept with it.
+
+    Parameters
+    ----------
+    shape : (int, int)
+        Rows and columns of the rectangle.
+    mask : ndarray of bool, shape (rows, columns), or None
+        Which pixels belong; None if all do.
+    spans : ndarray of int32, shape (n, 3)
+        The same as runs of pixels: row, first column, column after the last.
+    """
+
+    shape: tuple[int, int]
+    mask: NDArray[np.bool_] | None
+    spans: NDArray[np.int32]
+
+    @property
+    def count(self) -> int:
+        """Number of pixels that belong."""
+        return int((self.spans[:, 2] - self.spans[:, 1]).sum())
+
+    @classmethod
+    def from_mask(cls, mask: NDArray[np.bool_]) -> Footprint:
+        """Return the footprint of a mask."""
+        padded = np.zeros((mask.shape[0], mask.shape[1] + 2), dtype=np.int8)
+        padded[:, 1:-1] = mask
+        step = np.diff(padded, axis=1)
+        row, start = np.nonzero(step == 1)
+        stop = np.nonzero(step == -1)[1]
+        spans = np.stack([row, start, stop], axis=1).astype(np.int32)
+        return cls((mask.shape[0], mask.shape[1]), mask, spans)
+
+
+@dataclass(frozen=True, eq=False)
 class PlacedRegion:
     """The pixels of one picture that belong to a region.
 
@@ -106,21 +144,16 @@ class PlacedRegion:
     ----------
     rows, columns : slice
         The rectangle of the picture that just holds them.
-    mask : ndarray of bool, shape (rows, columns), or None
-        Which pixels of that rectangle belong; None if all do.
+    footprint : Footprint
+        Which pixels of that rectangle belong.
     cautions : tuple of Caution
         What placing it brought to light.
     """
 
     rows: slice
     columns: slice
-    mask: NDArray[np.bool_] | None
+    footprint: Footprint
     cautions: tuple[Caution, ...] = ()
-
-    @property
-    def shape(self) -> tuple[int, int]:
-        """Rows and columns of the rectangle."""
-        return self.rows.stop - self.rows.start, self.columns.stop - self.columns.start
 
 
 def place_region(region: Region, picture_shape: tuple[int, int]) -> PlacedRegion:
@@ -141,38 +174,33 @@ def place_region(region: Region, picture_shape: tuple[int, int]) -> PlacedRegion
     RegionError
         If it lies outside the picture or is less than `SMALLEST_WIDTH_PX` wide in any direction.
     """
-    return _place(region.name, region.vertices_px, (int(picture_shape[0]), int(picture_shape[1])))
-
-
-@lru_cache(maxsize=64)
-def _place(name: str, vertices: tuple[tuple[float, float], ...], shape: tuple[int, int]) -> PlacedRegion:
-    corners = np.array(vertices)
+    corners = np.array(region.vertices_px)
     low, high = corners.min(axis=0), corners.max(axis=0)
-    clipped = bool((low < -0.5).any() or (high > np.array(shape) - 0.5).any())
+    clipped = bool((low < -0.5).any() or (high > np.array(picture_shape) - 0.5).any())
     first = [max(0, math.ceil(v - _ON_OUTLINE)) for v in low]
-    last = [min(n - 1, math.floor(v + _ON_OUTLINE)) for v, n in zip(high, shape, strict=True)]
+    last = [min(n - 1, math.floor(v + _ON_OUTLINE)) for v, n in zip(high, picture_shape, strict=True)]
     if first[0] > last[0] or first[1] > last[1]:
         raise RegionError(
-            f"region {name!r}: no pixel of the picture ({shape[0]} x {shape[1]}) lies inside it; its rows run from "
-            f"{low[0]:g} to {high[0]:g}, its columns from {low[1]:g} to {high[1]:g}"
+            f"region {region.name!r}: no pixel of the picture ({picture_shape[0]} x {picture_shape[1]}) lies inside it; "
+            f"its rows run from {low[0]:g} to {high[0]:g}, its columns from {low[1]:g} to {high[1]:g}"
         )
-    rows, columns = slice(first[0], last[0] + 1), slice(first[1], last[1] + 1)
-    mask: NDArray[np.bool_] | None = None
-    if not _is_upright_rectangle(corners):
-        mask = _inside(corners, rows, columns)
-        used_rows, used_columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
-        if not used_rows.size:
-            raise RegionError(f"region {name!r}: no pixel of the picture lies inside it; draw it larger")
-        r0, r1, c0, c1 = used_rows[0], used_rows[-1] + 1, used_columns[0], used_columns[-1] + 1
-        mask = np.ascontiguousarray(mask[r0:r1, c0:c1])
-        rows, columns = slice(rows.start + r0, rows.start + r1), slice(columns.start + c0, columns.start + c1)
-        mask.setflags(write=False)
-    width = _narrowest(mask) if mask is not None else min(rows.stop - rows.start, columns.stop - columns.start)
+    shape = last[0] - first[0] + 1, last[1] - first[1] + 1
+    offset = (0, 0)
+    if _is_upright_rectangle(corners):
+        footprint = rectangle_footprint(shape)
+        width: float = min(shape)
+    else:
+        relative = np.round(corners - first, 6)
+        found = _footprint(tuple(map(tuple, relative.tolist())), shape)
+        if found is None:
+            raise RegionError(f"region {region.name!r}: no pixel of the picture lies inside it; draw it larger")
+        footprint, offset, width = found
     if width < SMALLEST_WIDTH_PX:
         raise RegionError(
-            f"region {name!r}: {width:.0f} px across, at least {SMALLEST_WIDTH_PX} px are needed in every direction "
-            "to tell fringes from noise; draw it larger"
+            f"region {region.name!r}: {width:.0f} px across, at least {SMALLEST_WIDTH_PX} px are needed in every "
+            "direction to tell fringes from noise; draw it larger"
         )
+    top, left = first[0] + offset[0], first[1] + offset[1]
     cautions = ()
     if clipped:
         cautions = (
@@ -183,7 +211,30 @@ def _place(name: str, vertices: tuple[tuple[float, float], ...], shape: tuple[in
                 "Move it inside if the cut part matters.",
             ),
         )
-    return PlacedRegion(rows, columns, mask, cautions)
+    rows, columns = footprint.shape
+    return PlacedRegion(slice(top, top + rows), slice(left, left + columns), footprint, cautions)
+
+
+@lru_cache(maxsize=64)
+def rectangle_footprint(shape: tuple[int, int]) -> Footprint:
+    """Return the footprint of an upright rectangle of `shape` (rows, columns)."""
+    rows = np.arange(shape[0], dtype=np.int32)
+    return Footprint(shape, None, np.stack([rows, np.zeros_like(rows), np.full_like(rows, shape[1])], axis=1))
+
+
+@lru_cache(maxsize=64)
+def _footprint(
+    corners: tuple[tuple[float, float], ...], shape: tuple[int, int]
+) -> tuple[Footprint, tuple[int, int], float] | None:
+    """Return footprint, its offset in the rectangle of `shape`, and its smallest width; None if it holds no pixel."""
+    mask = _inside(np.array(corners), slice(0, shape[0]), slice(0, shape[1]))
+    used_rows, used_columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
+    if not used_rows.size:
+        return None
+    top, bottom, left, right = used_rows[0], used_rows[-1] + 1, used_columns[0], used_columns[-1] + 1
+    mask = np.ascontiguousarray(mask[top:bottom, left:right])
+    mask.setflags(write=False)
+    return Footprint.from_mask(mask), (int(top), int(left)), _narrowest(mask)
 
 
 def _is_upright_rectangle(corners: NDArray[np.float64]) -> bool:

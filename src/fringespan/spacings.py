@@ -102,3 +102,30 @@ class PairAngle:
     peaks: tuple[int, int]
     angle_deg: float
     angle_uncertainty_deg: float
+
+
+def peaks_from_waves(micrograph, placed, fit):
+    inv = np.linalg.inv(micrograph.geometry_nm_per_px).T
+    out = []
+    order = np.argsort(-fit.power_ratio)
+    for k in order:
+        f = fit.frequency[k]
+        cov = fit.covariance[2 * k : 2 * k + 2, 2 * k : 2 * k + 2]
+        if f[1] < 0 or (f[1] == 0 and f[0] > 0):
+            f = -f
+        g = inv @ f
+        c = inv @ cov @ inv.T
+        norm = np.hypot(*g)
+        n = g / norm
+        t = np.array([-n[1], n[0]])
+        d = 1 / norm
+        fitu = d * d * np.sqrt(n @ c @ n)
+        out.append(Peak(g_per_px=f, g_covariance_per_px2=cov, g_per_nm=g, g_covariance_per_nm2=c, period_px=1 / np.hypot(*f), d_nm=d, d_fit_uncertainty_nm=fitu,
+            d_crystal_uncertainty_nm=0., d_uncertainty_nm=None, d_lattice_nm=None, d_lattice_uncertainty_nm=None, direction_deg=np.degrees(np.arctan2(-g[0], g[1])) % 180,
+            direction_uncertainty_deg=np.degrees(np.sqrt(t @ c @ t) / norm), signal_to_noise=np.sqrt(fit.power_ratio[k]), visibility=None, amplitude=2 * abs(fit.amplitude[k]),
+            phase_rad=0., phase_origin_px=(0., 0.), two_theta_mrad=None, lattice_index=None, combination_of=None, origin="found", withheld=None, cautions=()))
+    return tuple(out)
+
+
+def pair_angles(micrograph, peaks):
+    return ()

@@ -1,16 +1,87 @@
-"""The power spectrum of a region."""
+"""The power spectrum of a region: slow trend removed, edges tapered, one real FFT.
+
+The taper is a Kaiser window, so that neither the edges of the region nor a strong peak hide a weak one. It serves
+detection and the estimate of the noise; the positions of the peaks come from the untapered pixels (`fringespan.peaks`).
+"""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
+import numba
 import numpy as np
+import scipy.fft
+import scipy.ndimage
 from numpy.typing import NDArray
 
-__all__ = ["PowerSpectrum"]
+from fringespan.region import Footprint
+
+__all__ = ["PowerSpectrum", "RegionPixels", "Taper", "power_spectrum", "prepare_pixels", "taper"]
+
+_KAISER_BETA = 4.0
+_OBLIQUE_TAPER = 0.22
+"""Width of the raised-cosine edge of an oblique region, in units of the square root of its area."""
+
+_TREND_ROWS = 128
+_TREND_CELLS = 16
+_OUTLIER_SIGMA = 14.0
+"""Pixels further from the slow trend than this many standard deviations are defects, not electron counts."""
+
+_FAST = {"reassoc", "contract", "nsz", "arcp"}
 
 
-@dataclass(frozen=True, eq=False, kw_only=True, slots=True)
+@dataclass(frozen=True, eq=False, slots=True)
+class Taper:
+    """The detection window of a footprint.
+
+    Attributes
+    ----------
+    rows, columns : ndarray of float32
+        Its factors along the two axes; all ones where `oblique` carries the window.
+    oblique : ndarray of float32, shape (rows, columns), or None
+        The window of a region that is no upright rectangle.
+    power, total : float
+        Sum of the squared window; sum of the window.
+    transform_shape : (int, int)
+        Shape of the zero-padded real picture that is transformed.
+    """
+
+    rows: NDArray[np.float32]
+    columns: NDArray[np.float32]
+    oblique: NDArray[np.float32] | None
+    power: float
+    total: float
+    transform_shape: tuple[int, int]
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class RegionPixels:
+    """The pixels of a region, ready to be transformed and fitted.
+
+    Attributes
+    ----------
+    values : ndarray, shape (rows, columns)
+        Pixels of the region's rectangle as they are in memory; where there are defects, a copy with these on the trend.
+    footprint : Footprint
+        Which of them belong to the region.
+    trend : ndarray, shape (10,)
+        Slow trend, a cubic polynomial that is subtracted wherever the pixels are used (`trend_row`).
+    sigma : float
+        Standard deviation about the trend.
+    defect_count, saturated_count : int
+        Pixels left out because they are not finite or stand far off; because they are at the end of the range.
+    """
+
+    values: NDArray[np.generic]
+    footprint: Footprint
+    trend: NDArray[np.float64]
+    sigma: float
+    defect_count: int
+    saturated_count: int
+
+
+@dataclass(frozen=True, eq=False, slots=True)
 class PowerSpectrum:
     """Power density of a region on its frequency grid.
 
@@ -19,9 +90,337 @@ class PowerSpectrum:
     power : ndarray of float32, shape (rows, columns // 2 + 1)
         Power density, scaled so that white noise of variance s^2 has density s^2; row 0, column 0 is the origin, the
         second half of the rows holds the negative row frequencies (the order of a real FFT).
+    transform : ndarray of complex64, same shape
+        The transform it came from.
     shape : (int, int)
-        Rows and columns of the transform, so that bin (i, j) lies at (i / rows, j / columns) cycles per pixel.
+        Rows and columns of the transformed picture: bin (i, j) lies at (i / rows, j / columns) cycles per pixel.
+    block_maxima : ndarray of float32, shape (ceil(rows / 8), ceil((columns // 2 + 1) / 8))
+        Largest power in each block of 8 x 8 bins.
     """
 
     power: NDArray[np.float32]
+    transform: NDArray[np.complex64]
     shape: tuple[int, int]
+    block_maxima: NDArray[np.float32]
+
+
+# --- the window ----------------------------------------------------------------------------------------------------
+
+
+@lru_cache(maxsize=32)
+def taper(footprint: Footprint) -> Taper:
+    """Return the detection window of a footprint: Kaiser for a rectangle, a raised-cosine edge for another outline."""
+    ny, nx = footprint.shape
+    transform_shape = (scipy.fft.next_fast_len(ny, real=False), scipy.fft.next_fast_len(nx, real=True))
+    if footprint.mask is None:
+        rows = np.kaiser(ny + 2, _KAISER_BETA)[1:-1]
+        columns = np.kaiser(nx + 2, _KAISER_BETA)[1:-1]
+        power = float((rows**2).sum() * (columns**2).sum())
+        total = float(rows.sum() * columns.sum())
+        return Taper(rows.astype(np.float32), columns.astype(np.float32), None, power, total, transform_shape)
+    width = _OBLIQUE_TAPER * np.sqrt(footprint.count)
+    distance = edge_distance(footprint)
+    window = np.sin(np.minimum(distance / width, 1) * np.float32(np.pi / 2)) ** 2
+    ones = np.ones(ny, np.float32), np.ones(nx, np.float32)
+    power, total = float(np.vdot(window, window)), float(window.sum(dtype=np.float64))
+    return Taper(*ones, window, power, total, transform_shape)
+
+
+def edge_distance(footprint: Footprint) -> NDArray[np.float32]:
+    """Return each pixel's distance to the outline of an oblique footprint, in pixels; 0 outside."""
+    assert footprint.mask is not None
+    padded = np.pad(footprint.mask, 1)
+    # a third of the resolution is plenty for a window edge many pixels wide, and nine times faster
+    step = max(1, int(np.sqrt(footprint.count) / 256))
+    coarse = scipy.ndimage.distance_transform_edt(padded[::step, ::step]).astype(np.float32) * step
+    if step > 1:
+        coarse = np.repeat(np.repeat(coarse, step, axis=0), step, axis=1)[: padded.shape[0], : padded.shape[1]]
+        coarse = scipy.ndimage.uniform_filter(coarse, 2 * step - 1)
+    distance = coarse[1:-1, 1:-1] - 0.5
+    return np.where(footprint.mask, np.maximum(distance, 0.25), 0).astype(np.float32)
+
+
+# --- the slow trend ------------------------------------------------------------------------------------------------
+
+
+@lru_cache(maxsize=32)
+def _trend_spans(footprint: Footprint) -> NDArray[np.int32]:
+    """Choose about `_TREND_ROWS` rows, one at random in each stratum so that no fringe can hide in their rhythm."""
+    ny = footprint.shape[0]
+    wanted = min(ny, _TREND_ROWS)
+    edges = np.linspace(0, ny, wanted + 1)
+    jitter = np.random.default_rng(ny).uniform(0, 1, wanted)
+    chosen = np.minimum((edges[:-1] + jitter * np.diff(edges)).astype(int), ny - 1)
+    return np.ascontiguousarray(footprint.spans[np.isin(footprint.spans[:, 0], chosen)])
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_FAST)
+def _cell_sums(values, spans, cells_y, cells_x):  # type: ignore[no-untyped-def]
+    """Sum the pixels of some spans in coarse cells, relative to one of them."""
+    ny, nx = values.shape
+    sums = np.zeros((cells_y, cells_x))
+    counts = np.zeros((cells_y, cells_x))
+    squares = 0.0
+    middle = spans.shape[0] // 2
+    offset = np.float64(values[spans[middle, 0], (spans[middle, 1] + spans[middle, 2]) // 2])
+    if not np.isfinite(offset):
+        offset = 0.0
+    base = np.float32(offset)
+    for k in range(spans.shape[0]):
+        y = spans[k, 0]
+        cy = y * cells_y // ny
+        for cx in range(spans[k, 1] * cells_x // nx, (spans[k, 2] - 1) * cells_x // nx + 1):
+            # the cell of pixel x is x * cells_x // nx, so its first pixel is the rounded-up quotient
+            x0 = max((cx * nx + cells_x - 1) // cells_x, spans[k, 1])
+            x1 = min(((cx + 1) * nx + cells_x - 1) // cells_x, spans[k, 2])
+            s = np.float32(0)
+            q = np.float32(0)
+            for x in range(x0, x1):
+                v = np.float32(values[y, x]) - base
+                s += v
+                q += v * v
+            sums[cy, cx] += s
+            counts[cy, cx] += x1 - x0
+            squares += q
+    return sums, counts, squares, np.float64(base)
+
+
+@numba.njit(cache=True, nogil=True)
+def _fit_trend(sums, counts, squares):  # type: ignore[no-untyped-def]
+    """Fit the ten monomials up to third order to the cell means, weighted by their pixel counts."""
+    cells_y, cells_x = sums.shape
+    normal = np.zeros((10, 10))
+    right = np.zeros(10)
+    row = np.empty(10)
+    for cy in range(cells_y):
+        y = (cy + 0.5) * 2 / cells_y - 1
+        for cx in range(cells_x):
+            n = counts[cy, cx]
+            if n == 0:
+                continue
+            x = (cx + 0.5) * 2 / cells_x - 1
+            row[0] = 1.0
+            row[1] = x
+            row[2] = x * x
+            row[3] = x * x * x
+            row[4] = y
+            row[5] = y * x
+            row[6] = y * x * x
+            row[7] = y * y
+            row[8] = y * y * x
+            row[9] = y * y * y
+            for i in range(10):
+                right[i] += row[i] * sums[cy, cx]
+                for j in range(i + 1):
+                    normal[i, j] += n * row[i] * row[j]
+    total = normal[0, 0]
+    for i in range(10):
+        for j in range(i):
+            normal[j, i] = normal[i, j]
+        # a sliver of a region may not determine every term; this keeps such terms at zero
+        normal[i, i] += 1e-9 * total
+    trend = np.linalg.solve(normal, right)
+    variance = (squares - np.dot(trend, right)) / max(total, 1.0)
+    return trend, np.sqrt(max(variance, 0.0))
+
+
+@numba.njit(cache=True, nogil=True, inline="always")
+def trend_row(trend, y, ny):  # type: ignore[no-untyped-def]
+    """Return the coefficients of the trend along row y: a cubic in t = (x + 0.5) * 2 / columns - 1."""
+    t = (y + 0.5) * 2 / ny - 1
+    return (
+        np.float32(trend[0] + t * (trend[4] + t * (trend[7] + t * trend[9]))),
+        np.float32(trend[1] + t * (trend[5] + t * trend[8])),
+        np.float32(trend[2] + t * trend[6]),
+        np.float32(trend[3]),
+    )
+
+
+# --- the pixels ----------------------------------------------------------------------------------------------------
+
+
+def prepare_pixels(values: NDArray[np.generic], footprint: Footprint) -> RegionPixels:
+    """Find the slow trend of a region's pixels.
+
+    Parameters
+    ----------
+    values : ndarray, shape (rows, columns)
+        Pixels of the region's rectangle; not changed.
+    footprint : Footprint
+        Which of them belong to the region.
+
+    Returns
+    -------
+    RegionPixels
+        With `sigma` 0 if all pixels are equal.
+    """
+    if values.dtype == np.float16 or not values.dtype.isnative:
+        values = values.astype(np.float32 if values.dtype == np.float16 else values.dtype.newbyteorder("="))
+    trend, sigma = _trend(values, _trend_spans(footprint))
+    return RegionPixels(values, footprint, trend, sigma, 0, 0)
+
+
+def _trend(values: NDArray[np.generic], spans: NDArray[np.int32]) -> tuple[NDArray[np.float64], float]:
+    cells = min(_TREND_CELLS, values.shape[0]), min(_TREND_CELLS, values.shape[1])
+    sums, counts, squares, offset = _cell_sums(values, spans, *cells)
+    trend, sigma = _fit_trend(sums, counts, squares)
+    trend[0] += offset
+    return trend, float(sigma)
+
+
+def without_defects(pixels: RegionPixels) -> RegionPixels:
+    """Replace pixels that are not finite, far off, or at the end of the range by the trend of the others.
+
+    Returns
+    -------
+    RegionPixels
+        A copy, with the counts of what was replaced.
+    """
+    footprint = pixels.footprint
+    values = pixels.values.astype(np.float64)
+    inside = np.ones(footprint.shape, bool) if footprint.mask is None else footprint.mask
+    good = inside & np.isfinite(values)
+    saturated = np.zeros_like(good)
+    level = _saturation_level(pixels.values, good)
+    if level is not None:
+        saturated = good & (values >= level)
+        good &= ~saturated
+    for _ in range(3):
+        if not good.any():
+            break
+        spans = Footprint.from_mask(good).spans
+        trend, sigma = _trend(np.where(good, values, 0.0), spans)
+        away = np.abs(values - trend_surface(trend, footprint.shape))
+        spread = 1.4826 * float(np.median(away[good]))
+        far = good & (away > _OUTLIER_SIGMA * max(spread, 0.3 * sigma))
+        if not far.any():
+            break
+        good &= ~far
+    if not good.any():
+        return RegionPixels(values, footprint, np.zeros(10), 0.0, int(inside.sum()), int(saturated.sum()))
+    bad = inside & ~good
+    filled = np.where(good, values, trend_surface(trend, footprint.shape)).astype(np.float32)
+    return RegionPixels(filled, footprint, trend, sigma, int(bad.sum() - saturated.sum()), int(saturated.sum()))
+
+
+def _saturation_level(values: NDArray[np.generic], good: NDArray[np.bool_]) -> float | None:
+    """Return the pixel value at which the detector ended, or None if it never did."""
+    if not good.any():
+        return None
+    top = float(values[good].max())
+    if values.dtype.kind in "ui" and top == np.iinfo(values.dtype).max:
+        return top
+    # a saturated picture that was scaled afterwards has many pixels at exactly one value, its highest
+    at_top = np.count_nonzero(values[good] == values[good].max())
+    distinct = np.unique(values[good][:: max(1, good.sum() // 4096)]).size
+    if distinct > 256 and at_top > max(8, 2e-4 * good.sum()):
+        return top
+    return None
+
+
+def trend_surface(trend: NDArray[np.float64], shape: tuple[int, int]) -> NDArray[np.float64]:
+    """Return the trend at every pixel, shape (rows, columns)."""
+    y = ((np.arange(shape[0]) + 0.5) * 2 / shape[0] - 1)[:, None]
+    x = ((np.arange(shape[1]) + 0.5) * 2 / shape[1] - 1)[None]
+    t = trend
+    return np.asarray(
+        t[0] + y * (t[4] + y * (t[7] + y * t[9])) + x * (t[1] + y * (t[5] + y * t[8]) + x * (t[2] + y * t[6] + x * t[3]))
+    )
+
+
+# --- the transform -------------------------------------------------------------------------------------------------
+
+
+@numba.njit(cache=True, nogil=True, fastmath=True)
+def _tapered(values, spans, trend, rows, columns, oblique, out):  # type: ignore[no-untyped-def]
+    """Write (pixels - trend) * window into `out`; return lowest and highest difference.
+
+    Pixels that are not finite go unnoticed by the two extremes, but they spread over the whole transform.
+    """
+    ny, nx = values.shape
+    # one extreme per column, and slices that start at 0: so the compiler sees independent lanes
+    low = np.zeros(nx, np.float32)
+    high = np.zeros(nx, np.float32)
+    scaled = ((np.arange(nx) + 0.5) * 2 / nx - 1).astype(np.float32)
+    next_row = 0
+    for k in range(spans.shape[0]):
+        y = spans[k, 0]
+        while next_row <= y:
+            out[next_row, :] = np.float32(0)
+            next_row += 1
+        a, b, c, d = trend_row(trend, y, ny)
+        wy = rows[y]
+        x0, x1 = spans[k, 1], spans[k, 2]
+        source, target, wx, ts = values[y, x0:x1], out[y, x0:x1], columns[x0:x1], scaled[x0:x1]
+        below, above = low[x0:x1], high[x0:x1]
+        for x in range(source.size):
+            z = np.float32(source[x]) - (a + ts[x] * (b + ts[x] * (c + ts[x] * d)))
+            below[x] = min(below[x], z)
+            above[x] = max(above[x], z)
+            target[x] = z * wy * wx[x]
+        if oblique.shape[0] == ny:
+            window = oblique[y, x0:x1]
+            for x in range(source.size):
+                target[x] *= window[x]
+    out[next_row:, :] = np.float32(0)
+    return low.min(), high.max()
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_FAST)
+def _power(transform, scale, power, block_maxima):  # type: ignore[no-untyped-def]
+    """Write |transform|^2 * scale and the largest of each 8 x 8 block."""
+    ny, nx = power.shape
+    best = np.empty(nx, np.float32)
+    for block in range(block_maxima.shape[0]):
+        best[:] = np.float32(0)
+        for y in range(block * 8, min(block * 8 + 8, ny)):
+            for x in range(nx):
+                z = transform[y, x]
+                p = (z.real * z.real + z.imag * z.imag) * scale
+                power[y, x] = p
+                best[x] = max(best[x], p)
+        for j in range(block_maxima.shape[1]):
+            m = np.float32(0)
+            for x in range(j * 8, min(j * 8 + 8, nx)):
+                m = max(m, best[x])
+            block_maxima[block, j] = m
+
+
+def power_spectrum(pixels: RegionPixels) -> tuple[PowerSpectrum, RegionPixels]:
+    """Transform a region.
+
+    Parameters
+    ----------
+    pixels : RegionPixels
+
+    Returns
+    -------
+    PowerSpectrum
+    RegionPixels
+        The pixels that were transformed: those given, or, where these held defects, a copy without them.
+    """
+    window = taper(pixels.footprint)
+    oblique = window.oblique if window.oblique is not None else np.empty((0, 0), np.float32)
+    padded = np.empty(window.transform_shape, np.float32)
+    arguments = window.rows, window.columns, oblique, padded
+    low, high = _tapered(pixels.values, pixels.footprint.spans, pixels.trend, *arguments)
+    transform = scipy.fft.rfft2(padded, workers=1)
+    if not (np.isfinite(transform[0, 0]) and _within_range(pixels, float(low), float(high))):
+        pixels = without_defects(pixels)
+        _tapered(pixels.values, pixels.footprint.spans, pixels.trend, *arguments)
+        transform = scipy.fft.rfft2(padded, workers=1)
+    shape = transform.shape
+    power = np.empty(shape, np.float32)
+    block_maxima = np.empty((-(-shape[0] // 8), -(-shape[1] // 8)), np.float32)
+    _power(transform, np.float32(1 / window.power), power, block_maxima)
+    return PowerSpectrum(power, transform, window.transform_shape, block_maxima), pixels
+
+
+def _within_range(pixels: RegionPixels, low: float, high: float) -> bool:
+    """Say whether no pixel lies far off the trend or at the end of the range of its type."""
+    limit = _OUTLIER_SIGMA * pixels.sigma
+    if not (low > -limit and high < limit):
+        return False
+    kind = pixels.values.dtype
+    highest = pixels.trend[0] + high + np.abs(pixels.trend[1:]).sum()
+    return not (kind.kind in "ui" and kind.itemsize <= 2 and highest >= np.iinfo(kind).max)

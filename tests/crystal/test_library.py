@@ -64,7 +64,7 @@ def test_a_phase_goes_by_id_name_alias_or_formula(name: str, phase: str) -> None
 
 @pytest.mark.usefixtures("own_folder")
 def test_a_formula_of_several_phases_lists_them() -> None:
-    with pytest.raises(PhaseError, match="tio2_r .*tio2_a .*tio2_b"):
+    with pytest.raises(PhaseError, match=r"tio2_r .*tio2_a .*tio2_b"):
         load_phase("TiO2")
 
 

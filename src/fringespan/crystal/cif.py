@@ -445,7 +445,7 @@ def _most_plausible(
         Caution(
             "structure-origin",
             "note",
-            f"The file leaves the setting open; {best.space_group or 'the listed operations'} gives the sensible structure "
+            f"The file leaves the setting open; {best.space_group or 'the listed operations'} is the sensible one "
             f"(the other choice: {others}).",
             "State the origin in the space group's name, as in 'F d -3 m:1'.",
         )

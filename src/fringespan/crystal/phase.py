@@ -198,7 +198,7 @@ class Phase:
     @cached_property
     def reciprocal_basis(self) -> NDArray[np.float64]:
         """Cartesian a*, b*, c* in 1/angstrom as rows, shape (3, 3), without 2 pi; g = hkl @ reciprocal_basis."""
-        return np.linalg.inv(self.direct_basis).T
+        return np.asarray(np.linalg.inv(self.direct_basis).T, dtype=np.float64)
 
     @property
     def crystal_system(self) -> CrystalSystem:

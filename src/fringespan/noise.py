@@ -1,0 +1,208 @@
+"""The noise of a spectrum: its power density at any reciprocal vector, with peaks left out.
+
+Two steps. Rings around the origin give a smooth background in one dimension, robust against peaks. Where a peak is to
+be judged, the power around it, relative to the rings, gives the density there; three more samples (along the arc of the
+same radius, along the radial line, along the two axes) replace it where they are clearly higher, since astigmatic
+transfer rings, the streak of an edge, and scan-line noise all put more noise on a peak than its surroundings show.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numba
+import numpy as np
+from numpy.typing import NDArray
+
+from fringespan.spectrum import PowerSpectrum
+
+__all__ = ["RingBackground", "ring_background"]
+
+_SAMPLES = 160
+_INDEPENDENT_SHARE = 0.85
+"""Independent samples per bin of a ring: the window makes neighbours alike (1 / 2.2), smoothing adds other rings (1.9)."""
+
+_TABLE_STEPS = 4
+"""Entries of the background table per ring unit."""
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class RingBackground:
+    """Smooth noise power density as a function of the distance from the origin.
+
+    Attributes
+    ----------
+    density : ndarray of float32, shape (n,)
+        Density at radius k / 4 ring units.
+    samples : ndarray of float32, shape (n,)
+        Number of independent samples that each rests on.
+    step : (float, float)
+        Ring units per bin along (row, column); a ring unit is one bin of the axis with the wider bins.
+    """
+
+    density: NDArray[np.float32]
+    samples: NDArray[np.float32]
+    step: tuple[float, float]
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _Rings:
+    """Which bins sample which ring of a transform shape."""
+
+    radius: NDArray[np.float64]
+    samples: NDArray[np.int32]
+    counts: NDArray[np.int32]
+    table_position: NDArray[np.float64]
+    table_samples: NDArray[np.float32]
+    step: tuple[float, float]
+
+
+@lru_cache(maxsize=16)
+def _rings(shape: tuple[int, int], aspect: float) -> _Rings:
+    """Choose the samples of each ring; `aspect` is the column pixel size over the row pixel size."""
+    ny, nx = shape
+    frequency_step = np.array([1 / ny, 1 / (nx * aspect)])
+    step = frequency_step / frequency_step.max()
+    rows = np.where(np.arange(ny) <= ny // 2, np.arange(ny), np.arange(ny) - ny)
+    columns = np.arange(nx // 2 + 1)
+    radius = np.hypot(rows[:, None] * step[0], columns[None] * step[1])
+    # the axes carry scan-line noise and the leakage of edges, which the plane between them does not have
+    used = (np.abs(rows) > 1)[:, None] & (columns > 1)[None]
+    reach = min(step[0] * (ny // 2), step[1] * (nx // 2))
+    edges = [2.5]
+    while edges[-1] < radius.max():
+        r = edges[-1]
+        # about twenty bins' worth of arc where there is so little, one unit in the middle, 1/256 of the radius far out
+        edges.append(r + max(1.0, min(20 / r, 0.35 * r), r / 256))
+    edge = np.array(edges)
+    ring = np.digitize(radius[used], edge) - 1
+    flat = np.flatnonzero(used.ravel())
+    random = np.random.default_rng(ny * 65537 + nx)
+    order = random.permutation(flat.size)
+    ring, flat = ring[order], flat[order]
+    order = np.argsort(ring, kind="stable")
+    ring, flat = ring[order], flat[order]
+    first = np.searchsorted(ring, np.arange(edge.size))
+    count = np.minimum(np.diff(first), _SAMPLES)
+    kept = np.flatnonzero(count >= 8)
+    samples = np.zeros((kept.size, _SAMPLES), np.int32)
+    middle = np.empty(kept.size)
+    for i, k in enumerate(kept):
+        # in the order of memory, so that the gathering reads ahead
+        chosen = np.sort(flat[first[k] : first[k] + count[k]])
+        samples[i, : chosen.size] = chosen
+        middle[i] = (edge[k] + edge[k + 1]) / 2
+    table = np.arange(int(radius.max() * _TABLE_STEPS) + 2 * _TABLE_STEPS) / _TABLE_STEPS
+    # corners hold few bins; beyond the inscribed circle the last well-sampled ring goes on
+    assert middle.size and reach > 0
+    position = np.interp(np.log(np.maximum(table, 0.5)), np.log(middle), np.arange(middle.size, dtype=float))
+    independent = _INDEPENDENT_SHARE * np.interp(position, np.arange(middle.size), count[kept])
+    return _Rings(
+        middle,
+        samples,
+        count[kept].astype(np.int32),
+        position,
+        independent.astype(np.float32),
+        (float(step[0]), float(step[1])),
+    )
+
+
+@numba.njit(cache=True, nogil=True)
+def _kth(values, k):  # type: ignore[no-untyped-def]
+    """Return the k-th smallest value, reordering `values`."""
+    low, high = 0, values.size - 1
+    while low < high:
+        pivot = values[(low + high) // 2]
+        i, j = low, high
+        while i <= j:
+            while values[i] < pivot:
+                i += 1
+            while values[j] > pivot:
+                j -= 1
+            if i <= j:
+                values[i], values[j] = values[j], values[i]
+                i += 1
+                j -= 1
+        if k <= j:
+            high = j
+        elif k >= i:
+            low = i
+        else:
+            break
+    return values[k]
+
+
+@numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
+def trimmed_mean(values, start, rounds):  # type: ignore[no-untyped-def]
+    """Return the mean of exponentially distributed values, robust against a minority of high ones.
+
+    Values above four times the mean are left out; 0.92537 is the mean of a unit exponential variable below 4. `start` is
+    a first guess of the mean.
+    """
+    centre = np.float32(start)
+    for _ in range(rounds):
+        limit = np.float32(4) * centre
+        total = np.float32(0)
+        kept = np.float32(0)
+        for v in values:
+            inside = np.float32(1) if v < limit else np.float32(0)
+            total += inside * v
+            kept += inside
+        if kept < 0.25 * values.size:
+            # the guess was far too low: most values are above it
+            centre *= np.float32(4)
+        else:
+            centre = max(total / kept / np.float32(0.92537), np.float32(1e-30))
+    return centre
+
+
+@numba.njit(cache=True, nogil=True)
+def _ring_density(power, samples, counts, position, table):  # type: ignore[no-untyped-def]
+    """Fill the table of the background from the log of each ring's clipped mean, smoothed over neighbouring rings."""
+    n = counts.size
+    flat = power.ravel()
+    logs = np.empty(n)
+    buffer = np.empty(samples.shape[1], np.float32)
+    centre = np.float32(0)
+    for k in range(n):
+        for i in range(counts[k]):
+            buffer[i] = flat[samples[k, i]]
+        values = buffer[: counts[k]]
+        if k == 0:
+            centre = max(_kth(values, values.size // 2) / np.float32(0.6931472), np.float32(1e-30))
+        # from ring to ring the background changes little, so the last one is a guess that no peak has spoiled
+        centre = trimmed_mean(values, centre, 4)
+        logs[k] = np.log(centre)
+    smooth = np.empty(n)
+    for k in range(n):
+        smooth[k] = logs[k]
+        if 0 < k < n - 1:
+            # binomial mean of three, but not across the bend of a transfer ring that stands out of the scatter
+            bend = logs[k - 1] - 2 * logs[k] + logs[k + 1]
+            scatter = 6 * 2.2 / counts[k]
+            smooth[k] += 0.25 * bend * scatter / (scatter + max(bend * bend - scatter, 0.0))
+    for i in range(table.size):
+        p = position[i]
+        k = min(int(p), n - 2) if n > 1 else 0
+        f = p - k
+        table[i] = np.exp(smooth[k] + f * (smooth[k + 1] - smooth[k])) if n > 1 else np.exp(smooth[k])
+
+
+def ring_background(spectrum: PowerSpectrum, aspect: float = 1.0) -> RingBackground:
+    """Estimate the smooth background of a spectrum.
+
+    Parameters
+    ----------
+    spectrum : PowerSpectrum
+    aspect : float, optional
+        Column pixel size over row pixel size, so that rings are circles in 1/nm.
+
+    Returns
+    -------
+    RingBackground
+    """
+    rings = _rings(spectrum.shape, aspect)
+    table = np.empty(rings.table_position.size, np.float32)
+    _ring_density(spectrum.power, rings.samples, rings.counts, rings.table_position, table)
+    return RingBackground(table, rings.table_samples, rings.step)

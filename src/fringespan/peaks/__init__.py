@@ -1,0 +1,1 @@
+"""From a region's spectrum and pixels to reciprocal vectors with their covariance."""

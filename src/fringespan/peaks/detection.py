@@ -1,0 +1,418 @@
+"""Detection: which bins of a spectrum hold a fringe, at a controlled rate of false alarms.
+
+A local maximum of the spectrum is tested with a matched filter over its 7 x 7 complex bins, which wins back most of what
+the window loses between the bins. What passes here at a lowered threshold is fitted (`fringespan.peaks.joint_fit`) and
+judged by its fitted amplitude.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numba
+import numpy as np
+from numpy.typing import NDArray
+from scipy.special import lambertw
+
+from fringespan.noise import RingBackground, trimmed_mean
+from fringespan.region import Footprint
+from fringespan.spectrum import PowerSpectrum, taper
+
+__all__ = ["Candidates", "detection_threshold", "find_candidates"]
+
+_FIRST_PASS = 0.28
+"""Share of the detection threshold that a bin alone must reach over the rings; a tapered bin between two sees a third."""
+
+_MATCHED_PASS = 0.74
+"""Share of the detection threshold that the matched filter must reach over the local noise."""
+
+_MOST_CANDIDATES = 4096
+
+_COARSE = np.array([-1, 0, 1]) / 3
+_FINE = np.arange(-4, 5) / 8
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class Candidates:
+    """Places in a spectrum that may hold a fringe.
+
+    Attributes
+    ----------
+    frequency : ndarray, shape (n, 2)
+        (row, column) in cycles per pixel, column not negative.
+    density : ndarray, shape (n,)
+        Noise power density there.
+    samples : ndarray, shape (n,)
+        Number of independent samples that the density rests on.
+    ratio : ndarray, shape (n,)
+        Matched-filter power over the noise.
+    """
+
+    frequency: NDArray[np.float64]
+    density: NDArray[np.float64]
+    samples: NDArray[np.float64]
+    ratio: NDArray[np.float64]
+
+
+def detection_threshold(pixel_count: int, false_peaks_per_region: float) -> float:
+    """Return the power ratio T that noise alone exceeds `false_peaks_per_region` times per region, on average.
+
+    Parameters
+    ----------
+    pixel_count : int
+    false_peaks_per_region : float
+
+    Notes
+    -----
+    Expected number of local maxima of a chi-squared field with two degrees of freedom above t, over all reciprocal
+    vectors: n / 2 * lam / (2 pi) * (2 t - 1) * exp(-t), lam = 4 pi^2 / 12 for an untapered region [1]_ (from memory).
+
+    References
+    ----------
+    .. [1] K. J. Worsley, "Local maxima and the expected Euler characteristic of excursion sets of chi-squared, F and t
+       fields", Adv. Appl. Prob. 26 (1994) 13-42.
+    """
+    rate = false_peaks_per_region / (pixel_count / 2 * (4 * np.pi**2 / 12) / (2 * np.pi))
+    # (2 t - 1) exp(-t) = rate has the closed solution t = 1/2 - W_{-1}(-rate exp(1/2) / 2)
+    return float(0.5 - lambertw(-rate * np.exp(0.5) / 2, -1).real)
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _MatchedFilter:
+    coarse: NDArray[np.complex64]
+    fine: NDArray[np.complex64]
+
+
+@lru_cache(maxsize=32)
+def _matched_filter(footprint: Footprint) -> _MatchedFilter:
+    """Return filters h with T = |h^H z|^2 / S for the 7 x 7 bins z around a maximum, one row per sub-bin offset."""
+    window = taper(footprint)
+    bins = np.arange(-3, 4)
+
+    def responses(offsets: NDArray[np.float64]) -> NDArray[np.complex128]:
+        shift = (offsets[:, None] - bins[None]).ravel()
+        grid = window_transform(footprint, shift, shift, power=1)
+        n = offsets.size
+        return grid.reshape(n, 7, n, 7).transpose(0, 2, 1, 3).reshape(n * n, 49)
+
+    lags = np.arange(-6, 7)
+    lag = window_transform(footprint, -lags, -lags, power=2)
+    row, column = np.divmod(np.arange(49), 7)
+    covariance = lag[row[:, None] - row[None] + 6, column[:, None] - column[None] + 6]
+    covariance += 1e-5 * covariance[0, 0].real * np.eye(49)
+    inverse = np.linalg.inv(covariance)
+
+    def filters(offsets: NDArray[np.float64]) -> NDArray[np.complex64]:
+        b = responses(offsets)
+        weighted = b @ inverse.T
+        norm = np.sqrt(np.einsum("ij,ij->i", b.conj(), weighted).real)
+        return np.ascontiguousarray((weighted / norm[:, None]).conj(), dtype=np.complex64)
+
+    return _MatchedFilter(filters(_COARSE), filters(_FINE))
+
+
+def window_transform(
+    footprint: Footprint, row_shift: NDArray[np.float64], column_shift: NDArray[np.float64], *, power: int
+) -> NDArray[np.complex128]:
+    """Return sum(w^power * exp(2 pi i (sy y / Ny + sx x / Nx))) for every pair of shifts, in bins, from pixel (0, 0)."""
+    window = taper(footprint)
+    ny, nx = footprint.shape
+    transform_rows, transform_columns = window.transform_shape
+    if window.oblique is None:
+        y, x = np.arange(ny), np.arange(nx)
+        wy, wx = window.rows.astype(float) ** power, window.columns.astype(float) ** power
+        rows = np.exp(2j * np.pi / transform_rows * np.outer(row_shift, y)) @ wy
+        columns = np.exp(2j * np.pi / transform_columns * np.outer(column_shift, x)) @ wx
+        return np.outer(rows, columns)
+    # over a few bins the window is smooth enough to be summed in blocks first
+    step = max(1, int(min(ny, nx) / 96))
+    edge_y, edge_x = np.arange(0, ny, step), np.arange(0, nx, step)
+    blocks = np.add.reduceat(np.add.reduceat(window.oblique.astype(float) ** power, edge_y, axis=0), edge_x, axis=1)
+    y = edge_y + (np.diff(np.append(edge_y, ny)) - 1) / 2
+    x = edge_x + (np.diff(np.append(edge_x, nx)) - 1) / 2
+    rows = np.exp(2j * np.pi / transform_rows * np.outer(row_shift, y))
+    columns = np.exp(2j * np.pi / transform_columns * np.outer(column_shift, x))
+    return np.asarray(rows @ blocks @ columns.T)
+
+
+@lru_cache(maxsize=32)
+def _block_radii(shape: tuple[int, int], step: tuple[float, float], table_steps: int) -> NDArray[np.int32]:
+    """Return the first and last entry of the background table that each 8 x 8 block of bins touches."""
+    ny, nx = shape
+    rows = np.where(np.arange(ny) <= ny // 2, np.arange(ny), np.arange(ny) - ny)
+    blocks_y, blocks_x = -(-ny // 8), -(-(nx // 2 + 1) // 8)
+    near_y = np.array([np.abs(rows[8 * b : 8 * b + 8]).min() for b in range(blocks_y)]) * step[0]
+    far_y = np.array([np.abs(rows[8 * b : 8 * b + 8]).max() for b in range(blocks_y)]) * step[0]
+    near_x = np.arange(blocks_x) * 8 * step[1]
+    far_x = np.minimum(np.arange(blocks_x) * 8 + 7, nx // 2) * step[1]
+    low = np.hypot(near_y[:, None], near_x[None]) * table_steps
+    high = np.hypot(far_y[:, None], far_x[None]) * table_steps + 1
+    return np.stack([low, high], axis=-1).astype(np.int32)
+
+
+@numba.njit(cache=True, nogil=True, inline="always")
+def _power_at(power, i, j, nx):  # type: ignore[no-untyped-def]
+    """Return the power of any bin, by its symmetry."""
+    ny = power.shape[0]
+    if j < 0:
+        i, j = -i, -j
+    elif j > nx // 2:
+        i, j = -i, nx - j
+    return power[i % ny, j]
+
+
+@numba.njit(cache=True, nogil=True)
+def _gather(transform, i, j, nx, bins):  # type: ignore[no-untyped-def]
+    """Copy the 7 x 7 complex bins around (i, j)."""
+    ny = transform.shape[0]
+    for dy in range(-3, 4):
+        for dx in range(-3, 4):
+            ii = i + dy
+            jj = j + dx
+            if jj < 0:
+                bins[(dy + 3) * 7 + dx + 3] = np.conj(transform[(-ii) % ny, -jj])
+            elif jj > nx // 2:
+                bins[(dy + 3) * 7 + dx + 3] = np.conj(transform[(-ii) % ny, nx - jj])
+            else:
+                bins[(dy + 3) * 7 + dx + 3] = transform[ii % ny, jj]
+
+
+@numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
+def _filtered(filters, k, bins):  # type: ignore[no-untyped-def]
+    re = np.float32(0)
+    im = np.float32(0)
+    for b in range(49):
+        re += filters[k, b].real * bins[b].real - filters[k, b].imag * bins[b].imag
+        im += filters[k, b].real * bins[b].imag + filters[k, b].imag * bins[b].real
+    return re * re + im * im
+
+
+@numba.njit(cache=True, nogil=True, inline="always")
+def _vertex(before, middle, after):  # type: ignore[no-untyped-def]
+    """Return the offset of a parabola's maximum from the middle of three equidistant points, at most half a step."""
+    bend = before - 2 * middle + after
+    if bend >= 0:
+        return 0.0
+    return min(max(0.5 * (before - after) / bend, -0.5), 0.5)
+
+
+@numba.njit(cache=True, nogil=True, inline="always")
+def ring_at(table, fy, fx):  # type: ignore[no-untyped-def]
+    """Return the background at (fy, fx) ring units from the origin."""
+    p = np.sqrt(fy * fy + fx * fx) * 4
+    k = min(int(p), table.size - 2)
+    return table[k] + (p - k) * (table[k + 1] - table[k])
+
+
+@numba.njit(cache=True, nogil=True)
+def _line_noise(power, table, step_y, step_x, nx, y, x, dy, dx, near, far):  # type: ignore[no-untyped-def]
+    """Return the log of the noise over the rings on a line through (y, x) along (dy, dx), near..far bins away, and the count.
+
+    The mean of the logarithms of both sides: exact where the power follows a power law along the line. 0.5772 is Euler's
+    constant, the logarithmic mean of a unit exponential variable.
+    """
+    total = 0.0
+    n = 0
+    for k in range(near, far + 1):
+        for sign in (-1, 1):
+            i = int(np.rint(y + sign * k * dy))
+            j = int(np.rint(x + sign * k * dx))
+            if abs(i) > power.shape[0] // 2 or abs(j) > nx // 2:
+                continue
+            fy = i * step_y
+            fx = j * step_x
+            if fy * fy + fx * fx < 6.25:
+                continue
+            total += np.log(_power_at(power, i, j, nx) / ring_at(table, fy, fx) + 1e-30)
+            n += 1
+    if n < 8:
+        return 0.0, 0
+    return total / n + 0.5772157, n
+
+
+@numba.njit(cache=True, nogil=True)
+def local_density(power, table, ring_samples, step_y, step_x, nx, y, x, buffer):  # type: ignore[no-untyped-def]
+    """Return the noise density at (y, x) in bins and the number of independent samples behind it."""
+    iy = int(np.rint(y))
+    ix = int(np.rint(x))
+    ny = power.shape[0]
+    half = 10
+    n = 0
+    here = ring_at(table, y * step_y, x * step_x)
+    radius = int(np.sqrt((y * step_y) ** 2 + (x * step_x) ** 2) * 4)
+    ring_count = ring_samples[min(radius, ring_samples.size - 1)]
+    for dy in range(-half, half + 1):
+        i = iy + dy
+        if abs(i) > ny // 2 or (abs(i) <= 1 and abs(iy) > 1):
+            continue
+        for dx in range(-half, half + 1):
+            if abs(dy) <= 3 and abs(dx) <= 3:
+                continue
+            j = ix + dx
+            if abs(j) > nx // 2 or (abs(j) <= 1 and abs(ix) > 1):
+                continue
+            fy = i * step_y
+            fx = j * step_x
+            if fy * fy + fx * fx < 9.0:
+                continue
+            buffer[n] = _power_at(power, i, j, nx) / ring_at(table, fy, fx)
+            n += 1
+    density = here
+    samples = ring_count
+    if n >= 30:
+        # the surroundings against the rings: drawn towards 1 unless they differ by more than their scatter
+        local_count = n / 3.5
+        excess = trimmed_mean(buffer[:n], 1.0, 6) - 1
+        scatter = 1 / local_count
+        weight = max(excess * excess - 0.5 * scatter, 0.0) / (excess * excess + scatter)
+        density = here * (1 + weight * excess)
+        samples = 1 / (1 / ring_count + weight * weight / local_count)
+    norm = np.sqrt(y * y + x * x) + 1e-9
+    relative = np.log(density / here)
+    best = relative
+    best_samples = samples
+    # a straight line leaves the arc of its radius by k^2 / 2 r, so its reach grows with the root of the radius
+    reach = max(int(min(24.0, 4.0 + np.sqrt(2.0 * norm))), 9)
+    for guard in range(14):
+        py, px = y, x
+        near, far = 4, 14
+        if guard < 12:
+            # the streak of a straight edge, or its alias, may run in any direction
+            angle = np.pi * guard / 12
+            dy, dx = np.sin(angle), np.cos(angle)
+        elif guard == 12:
+            dy, dx = x / norm, -y / norm
+            far = reach
+        else:
+            dy, dx = y / norm, x / norm
+        if abs(x) < 4.5 and guard == 6:
+            # beside the axis the noise of the scan rows falls off steeply: take the column nearer to it
+            px = np.trunc(x)
+            far = 20
+        if abs(y) < 4.5 and guard == 0:
+            py = np.trunc(y)
+            far = 20
+        value, count = _line_noise(power, table, step_y, step_x, nx, py, px, dy, dx, near, far)
+        # a mean of logarithms scatters by pi / sqrt(6 n); 3.3 of these, with the line's own correlation, stand out
+        if count >= 8 and value > relative + 3.3 * 1.2825 * np.sqrt(1.6 / count) and value > best:
+            best = value
+            best_samples = count / 1.6 / 1.645
+    return here * np.exp(best), best_samples
+
+
+@numba.njit(cache=True, nogil=True)
+def _search(  # type: ignore[no-untyped-def]
+    power, transform, block_maxima, radii, table, ring_samples, step_y, step_x, nx, bin_y, bin_x, nearest,
+    first_threshold, matched_threshold, coarse, fine, out
+):
+    """Fill `out` with (row bin, column bin, density, samples, ratio) of the candidates; return how many."""
+    ny = power.shape[0]
+    columns = power.shape[1]
+    found = 0
+    bins = np.empty(49, np.complex64)
+    score = np.empty(fine.shape[0])
+    buffer = np.empty(512, np.float32)
+    side = int(np.rint(np.sqrt(fine.shape[0])))
+    for by in range(block_maxima.shape[0]):
+        for bx in range(block_maxima.shape[1]):
+            lowest = table[radii[by, bx, 0]]
+            for k in range(radii[by, bx, 0], min(radii[by, bx, 1] + 1, table.size)):
+                lowest = min(lowest, table[k])
+            limit = first_threshold * lowest
+            if block_maxima[by, bx] < limit:
+                continue
+            for row in range(by * 8, min(by * 8 + 8, ny)):
+                i = row if row <= ny // 2 else row - ny
+                for j in range(bx * 8, min(bx * 8 + 8, columns)):
+                    p = power[row, j]
+                    if p < limit or p < first_threshold * ring_at(table, i * step_y, j * step_x):
+                        continue
+                    if (j == 0 or 2 * j == nx) and i < 0:
+                        continue
+                    # distance from the origin and from the other bins that are their own conjugates
+                    ry = abs(i) * bin_y
+                    rx = j * bin_x
+                    my = (ny / 2 - abs(i)) * bin_y
+                    mx = (nx / 2 - j) * bin_x
+                    if ry * ry + rx * rx < nearest * nearest or min(ry, my) ** 2 + min(rx, mx) ** 2 < 9.0:
+                        continue
+                    highest = True
+                    for dy in range(-1, 2):
+                        for dx in range(-1, 2):
+                            if (dy != 0 or dx != 0) and _power_at(power, i + dy, j + dx, nx) >= p:
+                                highest = False
+                    if not highest:
+                        continue
+                    _gather(transform, i, j, nx, bins)
+                    ring = ring_at(table, i * step_y, j * step_x)
+                    best = 0.0
+                    for k in range(coarse.shape[0]):
+                        best = max(best, _filtered(coarse, k, bins))
+                    if best < 0.75 * matched_threshold * ring:
+                        continue
+                    top = 0
+                    for k in range(fine.shape[0]):
+                        score[k] = _filtered(fine, k, bins)
+                        if score[k] > score[top]:
+                            top = k
+                    if score[top] < 0.8 * matched_threshold * ring:
+                        continue
+                    ky, kx = top // side, top % side
+                    ky = min(max(ky, 1), side - 2)
+                    kx = min(max(kx, 1), side - 2)
+                    k = ky * side + kx
+                    y = i + (ky - side // 2 + _vertex(score[k - side], score[k], score[k + side])) / (side - 1)
+                    x = j + (kx - side // 2 + _vertex(score[k - 1], score[k], score[k + 1])) / (side - 1)
+                    density, samples = local_density(power, table, ring_samples, step_y, step_x, nx, y, x, buffer)
+                    ratio = score[top] / density
+                    if ratio < matched_threshold:
+                        continue
+                    if found < out.shape[0]:
+                        out[found, 0] = y
+                        out[found, 1] = x
+                        out[found, 2] = density
+                        out[found, 3] = samples
+                        out[found, 4] = ratio
+                        found += 1
+    return found
+
+
+def find_candidates(
+    spectrum: PowerSpectrum,
+    background: RingBackground,
+    footprint: Footprint,
+    *,
+    threshold: float,
+    smallest_distance_bins: float,
+) -> Candidates:
+    """Find the places in a spectrum that may hold a fringe.
+
+    Parameters
+    ----------
+    spectrum : PowerSpectrum
+    background : RingBackground
+    footprint : Footprint
+        Of the region that was transformed.
+    threshold : float
+        Final detection threshold (`detection_threshold`); candidates pass a lowered one.
+    smallest_distance_bins : float
+        Nearest distance to the origin, in bins of the region (1 / width).
+
+    Returns
+    -------
+    Candidates
+        In no particular order.
+    """
+    ny, nx = spectrum.shape
+    matched = _matched_filter(footprint)
+    out = np.empty((_MOST_CANDIDATES, 5))
+    count = _search(
+        spectrum.power, spectrum.transform, spectrum.block_maxima,
+        _block_radii(spectrum.shape, background.step, 4), background.density, background.samples,
+        *background.step, nx,
+        footprint.shape[0] / ny, footprint.shape[1] / nx, smallest_distance_bins,
+        np.float32(_FIRST_PASS * threshold), _MATCHED_PASS * threshold, matched.coarse, matched.fine, out,
+    )  # fmt: skip
+    found = out[:count]
+    return Candidates(found[:, :2] / (ny, nx), found[:, 2], found[:, 3], found[:, 4])
