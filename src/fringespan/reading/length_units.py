@@ -33,7 +33,6 @@ _NAMES_NM = {
     "ångström": 0.1,
     "ångstrom": 0.1,
     "micron": 1e3,
-    "micro": 1e3,
     "femtometer": 1e-6,
     "picometer": 1e-3,
     "nanometer": 1.0,

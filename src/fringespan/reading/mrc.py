@@ -32,7 +32,7 @@ _PLACEHOLDER = Caution(
 
 
 def open_picture(path: Path, frame: int) -> StoredPicture:
-    """Open one frame of a stack or one slice of a volume; rows are taken in the order of the file, from top to bottom."""
+    """Open one frame of a stack or one slice of a volume; the first row of the file is the top."""
     with path.open("rb") as file:
         raw = file.read(HEADER_DTYPE.itemsize)
     if len(raw) < HEADER_DTYPE.itemsize:
@@ -41,7 +41,8 @@ def open_picture(path: Path, frame: int) -> StoredPicture:
     columns, rows, count = (int(header[name]) for name in ("nx", "ny", "nz"))
     if min(rows, columns, count) < 1:
         raise UnreadablePictureError(
-            f"{path}: its MRC header claims {count} frames of {rows} x {columns} pixels; copy it again from the microscope"
+            f"{path}: its MRC header claims {count} frames of {rows} x {columns} pixels; copy it again from the "
+            "microscope"
         )
     mode = int(header["mode"])
     if mode not in _MODES or mode in (3, 101):

@@ -51,7 +51,7 @@ class PartialPixels:
         if not rows or not columns:
             return np.empty((len(rows), len(columns)), self.dtype)
         (r0, r1), (c0, c1) = ((min(part), max(part) + 1) for part in (rows, columns))
-        pixels = self._read(slice(r0, r1), slice(c0, c1)).astype(self.dtype, copy=False)
+        pixels = np.require(self._read(slice(r0, r1), slice(c0, c1)), self.dtype, ["ALIGNED"])
         if rows.step == columns.step == 1:
             return pixels
         # a step may be negative, so that it has to start at the right end
@@ -63,7 +63,7 @@ class PartialPixels:
 
 
 def native_pixels(pixels: NDArray[np.generic]) -> PixelSource:
-    """Return pixels that fast code can use: this computer's byte order, at most 8 bytes a number.
+    """Return pixels that fast code can use: aligned, in this computer's byte order, at most 8 bytes a number.
 
     Parameters
     ----------
@@ -73,7 +73,7 @@ def native_pixels(pixels: NDArray[np.generic]) -> PixelSource:
     wanted = pixels.dtype.newbyteorder("=")
     if wanted.kind == "f" and wanted.itemsize > 8:
         wanted = np.dtype(np.float64)
-    if wanted == pixels.dtype:
+    if wanted == pixels.dtype and pixels.flags.aligned:
         return cast("PixelSource", pixels)
     return PartialPixels(pixels.shape, wanted, lambda rows, columns: pixels[rows, columns])
 

@@ -46,9 +46,9 @@ def read(
 ) -> Micrograph:
     """Open a picture.
 
-    TIFF, MRC2014, PNG, JPEG, NumPy (.npy) and OME-Zarr are told apart by their content, not their name. Pixels of TIFF,
-    MRC, NumPy and Zarr are read when they are needed: opening a large picture or a long stack costs next to nothing, and
-    measuring a small region reads only that. The file must stay where it is meanwhile.
+    TIFF, MRC2014, PNG, JPEG, NumPy (.npy) and OME-Zarr are told apart by their content, not their name. Pixels of
+    TIFF, MRC, NumPy and Zarr are read when they are needed: opening a large picture or a long stack costs next to
+    nothing, and measuring a small region reads only that. The file must stay where it is meanwhile.
 
     Parameters
     ----------
@@ -69,8 +69,8 @@ def read(
     Raises
     ------
     UnreadablePictureError
-        If the file is missing, damaged, of an unknown format, no picture of real numbers, or a diffraction pattern. Damage
-        in the middle of a compressed picture is found when that part is read.
+        If the file is missing, damaged, of an unknown format, no picture of real numbers, or a diffraction pattern.
+        Damage in the middle of a compressed picture is found when that part is read.
     SettingsError
         If the file has no such frame.
     CalibrationError
@@ -95,9 +95,9 @@ def read(
         cs_mm=cs_mm,
         defocus_nm=defocus_nm,
         dark_level=dark_level,
-        name=file.name,
+        name=file.name or str(file),
         path=file,
-        frame=frame,
+        frame=int(frame),
         frame_count=stored.frame_count,
         cautions=(*stored.cautions, *believed.cautions),
     )

@@ -19,7 +19,7 @@ from fringespan.reading.stored_picture import COLOUR, JPEG, StoredPicture
 __all__ = ["open_picture"]
 
 _INCH_M = 0.0254
-_BITS = {"1": 1, "L": 1, "P": 1, "I;16": 2, "I": 2, "LA": 2, "RGB": 6, "RGBA": 8, "CMYK": 4}
+_BYTES = {"1": 1, "L": 1, "P": 1, "I;16": 2, "I": 2, "LA": 2, "RGB": 6, "RGBA": 8, "CMYK": 4}
 
 
 def open_picture(path: Path, frame: int) -> StoredPicture:
@@ -34,7 +34,9 @@ def _png(content: bytes, path: Path) -> StoredPicture:
         _check_size(header, content, path)
         # Pillow turns the chunk's pixels per metre into dots per inch
         dpi = header.info.get("dpi")
-    stated = () if dpi is None else (_per_unit(dpi[1] / _INCH_M, dpi[0] / _INCH_M, "m", "pHYs chunk"),)
+    stated: tuple[StatedPixelSize, ...] = ()
+    if dpi is not None:
+        stated = (_per_unit(dpi[1] / _INCH_M, dpi[0] / _INCH_M, "m", "pHYs chunk"),)
     # unlike Pillow, this keeps 16 bits of each colour
     samples = imagecodecs.png_decode(content)
     if samples.ndim == 2 or samples.shape[-1] <= 2:
@@ -48,7 +50,7 @@ def _jpeg(content: bytes, path: Path) -> StoredPicture:
         _check_size(picture, content, path)
         unit = {1: "inch", 2: "cm"}.get(picture.info.get("jfif_unit", 0))
         density = picture.info.get("jfif_density")
-        stated = ()
+        stated: tuple[StatedPixelSize, ...] = ()
         if unit is not None and density is not None:
             stated = (_per_unit(density[1], density[0], unit, "JPEG header"),)
         if picture.mode == "L":
@@ -63,7 +65,7 @@ def _pixels(picture: object) -> NDArray[np.uint8]:
 
 def _check_size(header: PngImageFile | JpegImageFile, content: bytes, path: Path) -> None:
     columns, rows = header.size
-    check_unpacked_size(rows * columns * _BITS.get(header.mode, 8), len(content), path)
+    check_unpacked_size(rows * columns * _BYTES.get(header.mode, 8), len(content), path)
 
 
 def _per_unit(rows: float, columns: float, unit: str, source: str) -> StatedPixelSize:

@@ -21,8 +21,8 @@ COLOUR = Caution(
 JPEG = Caution(
     "jpeg-compression",
     "warning",
-    "JPEG compression leaves blocks of 8 x 8 pixels, which show as false peaks at multiples of 1/8 per pixel, and weakens "
-    "fine fringes.",
+    "JPEG compression leaves blocks of 8 x 8 pixels, which show as false peaks at multiples of 1/8 per pixel, and "
+    "weakens fine fringes.",
     "Use the picture as the microscope saved it, without JPEG.",
 )
 
