@@ -2,8 +2,8 @@
 
 The classes of a reflection are those of `peak_over_background` (power of its peak over the mean power around it):
 visible >= 30, marginal >= 10, else invisible; distorted = bright enough, but moved by more than 0.3 of a fringe over
-the region even without film and noise, or a weak one (below 1 % of the strongest) that film, noise or a neighbour move by
-more than 0.6.
+the region even without film and noise, or a weak one (below 1 % of the strongest) that film, noise or a neighbour move
+by more than 0.6.
 """
 
 from dataclasses import dataclass
