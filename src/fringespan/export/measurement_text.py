@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Sequence
+from typing import Literal
 
 import numpy as np
 
@@ -13,7 +14,7 @@ from fringespan.record import Match, Record, RecordedPicture, RecordedRegion
 from fringespan.spacings import Peak
 from fringespan.uncertainty import NOT_GIVEN, value_text
 
-__all__ = ["caution_lines", "measurement_lines", "picture_heading"]
+__all__ = ["caution_lines", "measurement_lines", "picture_heading", "spacing_text"]
 
 _CAUTIONS_SHOWN = 3
 _PEAKS_WITH_ANGLES = 4
@@ -117,7 +118,7 @@ def _peak_lines(picture: RecordedPicture, region: RecordedRegion, width: int) ->
     peaks = region.peaks
     columns = [Column("", "", [str(number) for number in range(1, len(peaks) + 1)])]
     if picture.pixel_size_nm is None:
-        columns.append(Column("period", "px", [value_text(p.period_px, _period_uncertainty(p)) for p in peaks]))
+        columns.append(Column("period", "px", [spacing_text(p, "px") for p in peaks]))
     else:
         columns += _spacing_columns(peaks)
     directions = [value_text(p.direction_deg, p.direction_uncertainty_deg) for p in peaks]
@@ -149,7 +150,7 @@ def _peak_lines(picture: RecordedPicture, region: RecordedRegion, width: int) ->
 
 
 def _spacing_columns(peaks: Sequence[Peak]) -> list[Column]:
-    columns = [Column("d", "nm", [_spacing_text(p) for p in peaks])]
+    columns = [Column("d", "nm", [spacing_text(p, "nm") for p in peaks])]
     parts = {
         "fit": [_share(p.d_fit_uncertainty_nm, p) for p in peaks],
         "crystal": [_share(p.d_crystal_uncertainty_nm, p) for p in peaks],
@@ -164,7 +165,14 @@ def _spacing_columns(peaks: Sequence[Peak]) -> list[Column]:
     return columns
 
 
-def _spacing_text(peak: Peak) -> str:
+def spacing_text(peak: Peak, unit: Literal["nm", "px"]) -> str:
+    """Return the spacing of a peak with its uncertainty in parentheses, or "withheld".
+
+    In nm the uncertainty is the whole one, or that of fit and crystal while the pixel size's is not stated; in pixels
+    that of the fit.
+    """
+    if unit == "px":
+        return value_text(peak.period_px, _period_uncertainty(peak))
     if peak.d_nm is None:
         return "withheld"
     stated = peak.d_uncertainty_nm
