@@ -12,8 +12,7 @@ from fringespan.exceptions import RegionError
 from fringespan.lattice import PlaneLattice
 from fringespan.micrograph import Micrograph
 from fringespan.noise import ring_background
-from fringespan.peaks.detection import detection_threshold, find_candidates
-from fringespan.peaks.joint_fit import fit_jointly
+from fringespan.peaks.fringes import find_fringes
 from fringespan.region import Region, place_region
 from fringespan.settings import MeasurementSettings
 from fringespan.spacings import PairAngle, Peak, pair_angles, peaks_from_waves
@@ -92,18 +91,14 @@ def measure(
         raise RegionError(f"region {region.name!r}: all its pixels are equal; draw it where the picture shows something")
     size = micrograph.pixel_size_nm
     background = ring_background(spectrum, 1.0 if size is None else round(size[1] / size[0], 3))
-    threshold = detection_threshold(placed.footprint.count, settings.false_peaks_per_region)
-    candidates = find_candidates(
+    fringes = find_fringes(
+        pixels,
         spectrum,
         background,
-        placed.footprint,
-        threshold=threshold,
+        false_peaks_per_region=settings.false_peaks_per_region,
         smallest_distance_bins=settings.smallest_distance_bins,
     )
-    # the density is itself an estimate from m samples: F law instead of the exponential one
-    limits = candidates.samples * np.expm1(threshold / candidates.samples)
-    fit, kept = fit_jointly(pixels, candidates.frequency, candidates.density, limits)
-    peaks = peaks_from_waves(micrograph, placed, fit)
+    peaks = peaks_from_waves(micrograph, placed, fringes.fit)
     cautions: list[Caution] = [*micrograph.cautions, *placed.cautions]
     return Measurement(
         micrograph=micrograph,

@@ -8,11 +8,13 @@ import numba
 import numpy as np
 from numpy.typing import NDArray
 
+from fringespan.region import Footprint
 from fringespan.spectrum import RegionPixels, trend_row
 
-__all__ = ["Demodulation", "demodulate"]
+__all__ = ["Demodulation", "block_size", "demodulate"]
 
-_BLOCK = 8
+_LARGE = 400
+"""Regions wider than this are summed in blocks of 8 pixels, smaller ones in blocks of 4."""
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -37,30 +39,30 @@ class Demodulation:
 
 
 @numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
-def _demodulate(values, spans, trend, frequency, blocks, moments):  # type: ignore[no-untyped-def]
+def _demodulate(values, spans, trend, frequency, size, blocks, moments):  # type: ignore[no-untyped-def]
     ny, nx = values.shape
     count = frequency.shape[0]
     middle_y = (ny - 1) / 2
     middle_x = (nx - 1) / 2
+    half = (size - 1) / 2
     scaled = ((np.arange(nx) + 0.5) * 2 / nx - 1).astype(np.float32)
+    position = (np.arange(nx) - middle_x).astype(np.float32)
     wave_re = np.empty((count, nx), np.float32)
     wave_im = np.empty((count, nx), np.float32)
+    weights = np.empty((count, 4, 8), np.float32)
     for k in range(count):
         for x in range(nx):
             angle = 2 * np.pi * frequency[k, 1] * (x - middle_x)
             wave_re[k, x] = np.cos(angle)
             wave_im[k, x] = -np.sin(angle)
-    position = (np.arange(nx) - middle_x).astype(np.float32)
-    z = np.zeros((8, nx), np.float32)
-    weights = np.empty((count, 4, 8), np.float32)
-    for k in range(count):
-        for r in range(8):
-            angle = 2 * np.pi * frequency[k, 0] * (r - 3.5)
+        for r in range(size):
+            angle = 2 * np.pi * frequency[k, 0] * (r - half)
             weights[k, 0, r] = np.cos(angle)
             weights[k, 1, r] = -np.sin(angle)
-            weights[k, 2, r] = np.cos(angle) * (r - 3.5)
-            weights[k, 3, r] = -np.sin(angle) * (r - 3.5)
-    padded = 8 * blocks.shape[2]
+            weights[k, 2, r] = np.cos(angle) * (r - half)
+            weights[k, 3, r] = -np.sin(angle) * (r - half)
+    z = np.zeros((size, nx), np.float32)
+    padded = size * blocks.shape[2]
     re = np.zeros(padded + 8, np.float32)
     im = np.zeros(padded + 8, np.float32)
     block_re = np.zeros(padded + 8, np.float32)
@@ -69,17 +71,23 @@ def _demodulate(values, spans, trend, frequency, blocks, moments):  # type: igno
     down_im = np.empty(nx, np.float32)
     span = 0
     for block in range(blocks.shape[1]):
-        y0 = block * 8
+        y0 = block * size
         z[:, :] = np.float32(0)
-        while span < spans.shape[0] and spans[span, 0] < y0 + 8:
+        while span < spans.shape[0] and spans[span, 0] < y0 + size:
             y, x0, x1 = spans[span, 0], spans[span, 1], spans[span, 2]
             a, b, c, d = trend_row(trend, y, ny)
             source, target, t = values[y, x0:x1], z[y - y0, x0:x1], scaled[x0:x1]
             for x in range(source.size):
                 target[x] = np.float32(source[x]) - (a + t[x] * (b + t[x] * (c + t[x] * d)))
             span += 1
+        centre = y0 + half - middle_y
         for k in range(count):
-            _eight_rows(z, weights[k], wave_re[k], wave_im[k], re, im, down_re, down_im)
+            if size == 8:
+                _eight_rows(z, weights[k, 0], weights[k, 1], wave_re[k], wave_im[k], re, im)
+                _eight_rows(z, weights[k, 2], weights[k, 3], wave_re[k], wave_im[k], down_re, down_im)
+            else:
+                _four_rows(z, weights[k, 0], weights[k, 1], wave_re[k], wave_im[k], re, im)
+                _four_rows(z, weights[k, 2], weights[k, 3], wave_re[k], wave_im[k], down_re, down_im)
             across_re = np.float32(0)
             across_im = np.float32(0)
             sum_re = np.float32(0)
@@ -89,15 +97,14 @@ def _demodulate(values, spans, trend, frequency, blocks, moments):  # type: igno
                 across_im += im[x] * position[x]
                 sum_re += down_re[x]
                 sum_im += down_im[x]
-            _sums_of_eight(re, block_re)
-            _sums_of_eight(im, block_im)
-            # what is common to the eight rows: the phase of their middle
-            centre = y0 + 3.5 - middle_y
+            _sums_of_neighbours(re, size, block_re)
+            _sums_of_neighbours(im, size, block_im)
+            # what is common to the rows of the block: the phase of their middle
             angle = 2 * np.pi * frequency[k, 0] * centre
             turn = np.cos(angle) - 1j * np.sin(angle)
             total = 0j
             for j in range(blocks.shape[2]):
-                value = (block_re[8 * j] + 1j * block_im[8 * j]) * turn
+                value = (block_re[size * j] + 1j * block_im[size * j]) * turn
                 blocks[k, block, j] = value
                 total += value
             moments[k, 0] += total
@@ -107,16 +114,12 @@ def _demodulate(values, spans, trend, frequency, blocks, moments):  # type: igno
             im[nx:] = np.float32(0)
 
 
-@numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
-def _eight_rows(z, weights, wave_re, wave_im, re, im, down_re, down_im):  # type: ignore[no-untyped-def]
-    """Demodulate eight rows along the columns and then along the row, alone and weighted by the row."""
-    # all weights in scalars and all rows in one array: more pointers would keep the compiler from using vectors
-    _weighted_rows(z, weights[0], weights[1], wave_re, wave_im, re, im)
-    _weighted_rows(z, weights[2], weights[3], wave_re, wave_im, down_re, down_im)
+# In the two functions below all weights are scalars and all rows lie in one array: with more pointers the compiler would
+# not use vectors.
 
 
 @numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
-def _weighted_rows(z, c, s, wave_re, wave_im, re, im):  # type: ignore[no-untyped-def]
+def _eight_rows(z, c, s, wave_re, wave_im, re, im):  # type: ignore[no-untyped-def]
     c0, c1, c2, c3, c4, c5, c6, c7 = c[0], c[1], c[2], c[3], c[4], c[5], c[6], c[7]
     s0, s1, s2, s3, s4, s5, s6, s7 = s[0], s[1], s[2], s[3], s[4], s[5], s[6], s[7]
     for x in range(z.shape[1]):
@@ -129,6 +132,17 @@ def _weighted_rows(z, c, s, wave_re, wave_im, re, im):  # type: ignore[no-untype
 
 
 @numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
+def _four_rows(z, c, s, wave_re, wave_im, re, im):  # type: ignore[no-untyped-def]
+    c0, c1, c2, c3 = c[0], c[1], c[2], c[3]
+    s0, s1, s2, s3 = s[0], s[1], s[2], s[3]
+    for x in range(z.shape[1]):
+        a = z[0, x] * c0 + z[1, x] * c1 + z[2, x] * c2 + z[3, x] * c3
+        b = z[0, x] * s0 + z[1, x] * s1 + z[2, x] * s2 + z[3, x] * s3
+        re[x] = a * wave_re[x] - b * wave_im[x]
+        im[x] = a * wave_im[x] + b * wave_re[x]
+
+
+@numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
 def _shifted_sum(line, shift, out):  # type: ignore[no-untyped-def]
     shifted = line[shift:]
     for x in range(out.size - 8):
@@ -136,12 +150,17 @@ def _shifted_sum(line, shift, out):  # type: ignore[no-untyped-def]
 
 
 @numba.njit(cache=True, nogil=True)
-def _sums_of_eight(line, scratch):  # type: ignore[no-untyped-def]
-    """Write into `scratch` at every eighth place the sum of the eight values of `line` that start there."""
-    # three whole passes over distinct arrays run in vectors, eight-fold sums do not
-    _shifted_sum(line, 4, scratch)
-    _shifted_sum(scratch, 2, line)
-    _shifted_sum(line, 1, scratch)
+def _sums_of_neighbours(line, size, out):  # type: ignore[no-untyped-def]
+    """Write into `out`, at every multiple of `size` (4 or 8), the sum of `size` values of `line`, which becomes scratch."""
+    # whole passes over distinct arrays run in vectors, short sums do not
+    if size == 8:
+        _shifted_sum(line, 4, out)
+        _shifted_sum(out, 2, line)
+        _shifted_sum(line, 1, out)
+    else:
+        _shifted_sum(line, 2, out)
+        _shifted_sum(out, 1, line)
+        out[:] = line
 
 
 def demodulate(pixels: RegionPixels, frequency: NDArray[np.float64]) -> Demodulation:
@@ -158,7 +177,13 @@ def demodulate(pixels: RegionPixels, frequency: NDArray[np.float64]) -> Demodula
     Demodulation
     """
     ny, nx = pixels.footprint.shape
-    blocks = np.empty((len(frequency), -(-ny // _BLOCK), -(-nx // _BLOCK)), np.complex64)
+    size = block_size(pixels.footprint)
+    blocks = np.empty((len(frequency), -(-ny // size), -(-nx // size)), np.complex64)
     moments = np.zeros((len(frequency), 3), np.complex128)
-    _demodulate(pixels.values, pixels.footprint.spans, pixels.trend, frequency, blocks, moments)
-    return Demodulation(frequency, blocks, _BLOCK, moments)
+    _demodulate(pixels.values, pixels.footprint.spans, pixels.trend, frequency, size, blocks, moments)
+    return Demodulation(frequency, blocks, size, moments)
+
+
+def block_size(footprint: Footprint) -> int:
+    """Return the side of the blocks, in pixels, that a region of this footprint is summed in."""
+    return 8 if min(footprint.shape) > _LARGE else 4
