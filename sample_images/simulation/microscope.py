@@ -302,22 +302,26 @@ def expose(
 ) -> Exposure:
     """Take a picture of atoms on a film."""
     wave = exit_wave(cloud, camera.field_nm, camera.field_points, lens.voltage_kv)
-    phase = film.phase(camera, lens, rng)
+    return exposed(wave, film.phase(camera, lens, rng), lens, camera, rng, dtype)
+
+
+def exposed(
+    wave: np.ndarray, phase: np.ndarray, lens: Lens, camera: Camera, rng: np.random.Generator, dtype: str = "uint16"
+) -> Exposure:
+    """Take a picture of a wave that has passed a specimen and then a film with the phase given."""
     return _exposure(
         np.abs(lens.through(wave, camera.field_nm)) ** 2,
         np.abs(lens.through(wave * np.exp(1j * phase), camera.field_nm)) ** 2,
-        film.contrast(phase, camera, lens), camera, rng, dtype,
+        Film.contrast(phase, camera, lens), camera, rng, dtype,
     )  # fmt: skip
 
 
-def expose_crystal(
-    wave: CrystalWave, film: Film, lens: Lens, camera: Camera, rng: np.random.Generator, dtype: str = "uint16"
-) -> Exposure:
+def expose_crystal(wave: CrystalWave, film: Film, lens: Lens, camera: Camera, rng: np.random.Generator) -> Exposure:
     """Take a picture of an endless crystal with a film on it."""
     phase = film.phase(camera, lens, rng)
     return _exposure(
         crystal_image(wave, None, lens, camera), crystal_image(wave, phase, lens, camera),
-        film.contrast(phase, camera, lens), camera, rng, dtype,
+        film.contrast(phase, camera, lens), camera, rng, "uint16",
     )  # fmt: skip
 
 

@@ -140,3 +140,44 @@ def carbon_film(size: tuple[float, float], thickness: float, rng: np.random.Gene
             keep[close.max(axis=1)] = False
         points = np.concatenate([points, fresh[keep]])
     return Cloud(np.full(wanted, "C"), points[:wanted])
+
+
+def graphene(length: float, depth: float, turn_deg: float, rng: np.random.Generator) -> np.ndarray:
+    """Return one layer of graphite as points (n, 2) = (along, with the beam), nm, about (0, 0), turned in its plane."""
+    bond = 0.142
+    axes = bond * np.sqrt(3) * np.array([[1.0, 0.0], [0.5, np.sqrt(3) / 2]])
+    reach = int(np.ceil(np.hypot(length, depth) / bond))
+    nodes = np.stack(np.meshgrid(*[np.arange(-reach, reach + 1)] * 2), axis=-1).reshape(-1, 2) + rng.uniform(0, 1, 2)
+    points = np.concatenate([nodes, nodes + 1 / 3]) @ axes
+    turn = np.radians(turn_deg)
+    points = points @ np.array([[np.cos(turn), np.sin(turn)], [-np.sin(turn), np.cos(turn)]])
+    return points[(np.abs(points[:, 0]) <= length / 2) & (np.abs(points[:, 1]) <= depth / 2)]
+
+
+def flat_stack(
+    layers: int, spacing: float, length: float, depth: float, normal_deg: float, rng: np.random.Generator
+) -> Cloud:
+    """Return flat graphitic layers about the origin, edge-on, turned at random against each other (turbostratic)."""
+    angle = np.radians(normal_deg)
+    normal, along = np.array([np.cos(angle), np.sin(angle)]), np.array([-np.sin(angle), np.cos(angle)])
+    positions = []
+    for index in range(layers):
+        sheet = graphene(length, depth, rng.uniform(0, 60), rng)
+        across = (index - (layers - 1) / 2) * spacing
+        positions.append(np.column_stack([sheet[:, :1] * along + across * normal, sheet[:, 1]]))
+    return Cloud(np.full(sum(map(len, positions)), "C"), np.concatenate(positions))
+
+
+def bent_stack(
+    layers: int, spacing: float, inner_radius: float, arc_deg: tuple[float, float], depth: float,
+    rng: np.random.Generator,
+) -> Cloud:  # fmt: skip
+    """Return graphitic layers bent to arcs about the origin, edge-on, turned at random against each other."""
+    first, last = np.radians(arc_deg)
+    positions = []
+    for index in range(layers):
+        radius = inner_radius + index * spacing
+        sheet = graphene(radius * (last - first), depth, rng.uniform(0, 60), rng)
+        angle = (first + last) / 2 + sheet[:, 0] / radius
+        positions.append(np.column_stack([radius * np.cos(angle), radius * np.sin(angle), sheet[:, 1]]))
+    return Cloud(np.full(sum(map(len, positions)), "C"), np.concatenate(positions))

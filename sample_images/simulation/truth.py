@@ -7,6 +7,7 @@ by more than 0.6.
 """
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -141,65 +142,22 @@ def describe_grain(
     `ideal` is the picture without film and noise, `others` are the grains whose reflections are no background.
     """
     crystal, orientation = grain.crystal, grain.orientation
-    true_px, stated_px = np.asarray(true_pixel_nm), np.asarray(stated_pixel_nm)
-    mask = polygon_mask(picture.shape, grain.vertices_px)
-    extent_px = float(np.sqrt(mask.sum()))
-    window, ideal_window = patch(picture, mask, True), patch(ideal, mask, True)
-    plain = patch(ideal, mask, False)
+    view = _View(picture, ideal, grain.vertices_px, np.asarray(true_pixel_nm), np.asarray(stated_pixel_nm))
     hkl, g = zone_reflections(crystal, orientation, d_min_nm)
-    points = [g * true_px] + [zone_reflections(o.crystal, o.orientation, d_min_nm)[1] * true_px for o in others]
-    all_points = np.concatenate(points)
     amplitude, centring = crystal.relative_amplitude(hkl), crystal.centring_absent(hkl)
-    reflections = []
-    for index in range(len(hkl)):
-        g_px = g[index] * true_px
-        if np.abs(g_px).max() > 0.5:
-            continue
-        g_file = g_px / stated_px
-        found = window.maximum(g_px, 1.3 / extent_px)
-        background = _background(window, g_px, extent_px, all_points)
-        power = found[1] if found else float(np.abs(window.amplitude(g_px[:1], g_px[1:]))[0, 0] ** 2)
-        ratio = power / background
-        pulled = _cycles_along(plain, g_px, extent_px)
-        pulled_window = _cycles_along(ideal_window, g_px, extent_px)
-        moved = pulled is None or abs(pulled) > DISTORTED_CYCLES or found is None
-        bright = "distorted" if moved else "visible" if ratio >= VISIBLE else "marginal"
-        seen = bright if ratio >= MARGINAL else "invisible"
-        entry: dict[str, Any] = {
-            "hkl": hkl[index].tolist(),
-            "d_lattice_nm": round(float(1 / np.linalg.norm(hkl[index] @ crystal.reciprocal_per_nm)), 7),
-            "g_true_per_nm": _rounded(g[index], 6),
-            "d_true_nm": round(float(1 / np.linalg.norm(g[index])), 7),
-            "g_per_nm": _rounded(g_file, 6),
-            "d_nm": round(float(1 / np.linalg.norm(g_file)), 7),
-            "direction_deg": round(float(np.degrees(np.arctan2(-g_file[0], g_file[1])) % 180), 4),
-            "absent": "centring" if centring[index] else "symmetry" if amplitude[index] < 1e-4 else None,
-            "peak_over_background": round(ratio, 1),
-            "seen": seen,
-        }
-        if seen != "invisible":
-            entry["shape_error_cycles"] = None if pulled is None else round(pulled, 4)
-            entry["window_error_cycles"] = None if pulled_window is None else round(pulled_window, 4)
-        if found and seen in ("visible", "distorted"):
-            deviation = np.linalg.norm(g_file) / np.linalg.norm(found[0] / stated_px) - 1
-            entry["check_d_deviation"] = round(float(deviation), 6)
-            entry["check_cycles"] = round(float(np.linalg.norm(found[0] - g_px) * extent_px), 3)
-        reflections.append(entry)
-    brightest = max(entry["peak_over_background"] for entry in reflections)
-    for entry in reflections:
-        if entry.get("check_cycles", 0) > TOLERANCE_CYCLES and entry["peak_over_background"] < STRONG * brightest:
-            entry["seen"] = "distorted"
-    height_width = np.ptp(np.argwhere(mask), axis=0) + 1
-    result: dict[str, Any] = {
-        "name": grain.name,
-        "kind": grain.kind,
-        "vertices_px": _rounded(grain.vertices_px, 2),
-        "extent_nm": round(extent_px * float(np.sqrt(np.prod(true_px))), 3),
-        "box_px": height_width.tolist(),
+    other_g = [zone_reflections(o.crystal, o.orientation, d_min_nm)[1] for o in others]
+    lengths = np.linalg.norm(hkl @ crystal.reciprocal_per_nm, axis=1)
+    absent = [
+        "centring" if off else "symmetry" if weak else None
+        for off, weak in zip(centring, amplitude < 1e-4, strict=True)
+    ]
+    reflections = view.reflections(hkl, g, 1 / lengths, absent, np.concatenate([g, *other_g]))
+    result = {
+        **_outlined(grain.name, grain.kind, view),
         "phase": crystal.id,
         "phase_name": crystal.name,
         "space_group": crystal.space_group,
-        "cell_nm_deg": list(crystal.cell),
+        "cell_nm_deg": [round(edge, 7) for edge in crystal.cell],
         "cell_source": crystal.source,
         "zone": list(orientation.zone),
         "reference_hkl": list(orientation.reference_hkl),
@@ -208,12 +166,132 @@ def describe_grain(
         "tilt_axis_deg": orientation.tilt_axis_deg,
         "particle": grain.particle,
         "reflections": reflections,
+        "check": _check(reflections),
     }
-    result["check"] = _check(result["reflections"])
     if grain.cloud is not None:
-        extent_nm = extent_px * float(true_px.mean())
+        extent_nm = view.extent_px * float(view.true_px.mean())
         result["check"]["projected_atoms_worst_cycles"] = _atoms_check(grain.cloud, g, hkl, crystal, extent_nm)
     return result
+
+
+@dataclass(frozen=True)
+class Stack:
+    """Layers with one spacing (nm) and no other order among them; normal at `direction_deg` in the region's middle."""
+
+    name: str
+    phase_name: str
+    spacing_nm: float
+    direction_deg: float
+    vertices_px: np.ndarray
+    facts: dict[str, Any]
+
+
+def describe_stack(
+    stack: Stack,
+    picture: np.ndarray,
+    ideal: np.ndarray,
+    true_pixel_nm: tuple[float, float],
+    stated_pixel_nm: tuple[float, float],
+    others: tuple[Stack, ...] = (),
+) -> dict[str, Any]:
+    """Return the truth of a stack of layers; its reflections 00l count two layers to a cell, as in graphite."""
+    view = _View(picture, ideal, stack.vertices_px, np.asarray(true_pixel_nm), np.asarray(stated_pixel_nm))
+    orders = np.arange(1, 4)
+    hkl = np.outer(2 * orders, [0, 0, 1])
+    g = [_family(one, orders) for one in (stack, *others)]
+    reflections = view.reflections(hkl, g[0], stack.spacing_nm / orders, [None] * len(orders), np.concatenate(g))
+    return {
+        **_outlined(stack.name, "polygon", view),
+        "phase": None,
+        "phase_name": stack.phase_name,
+        "layer_spacing_nm": stack.spacing_nm,
+        "reference_hkl": [0, 0, 2],
+        "reference_direction_deg": stack.direction_deg,
+        "layers": stack.facts,
+        "reflections": reflections,
+        "check": _check(reflections),
+    }
+
+
+def _family(stack: Stack, orders: np.ndarray) -> np.ndarray:
+    angle = np.radians(stack.direction_deg % 180)
+    towards = np.array([-np.sin(angle), np.cos(angle)])
+    if towards[1] < 0:
+        towards = -towards
+    return np.outer(orders / stack.spacing_nm, towards)
+
+
+def _outlined(name: str, kind: str, view: "_View") -> dict[str, Any]:
+    return {
+        "name": name,
+        "kind": kind,
+        "vertices_px": _rounded(view.vertices_px, 2),
+        "extent_nm": round(view.extent_px * float(np.sqrt(np.prod(view.true_px))), 3),
+        "box_px": (np.ptp(np.argwhere(view.mask), axis=0) + 1).tolist(),
+    }
+
+
+@dataclass(frozen=True)
+class _View:
+    """A region of a picture, with and without noise, in which reflections of known place are looked at."""
+
+    picture: np.ndarray
+    ideal: np.ndarray
+    vertices_px: np.ndarray
+    true_px: np.ndarray
+    stated_px: np.ndarray
+
+    @cached_property
+    def mask(self) -> np.ndarray:
+        return polygon_mask(self.picture.shape, self.vertices_px)
+
+    @property
+    def extent_px(self) -> float:
+        return float(np.sqrt(self.mask.sum()))
+
+    def reflections(
+        self, hkl: np.ndarray, g: np.ndarray, d_lattice: np.ndarray, absent: list[str | None], lattice_g: np.ndarray
+    ) -> list[dict[str, Any]]:
+        """Return the truth of each reflection; `lattice_g` are all places (1/nm) that are no background."""
+        window, plain = patch(self.picture, self.mask, True), patch(self.ideal, self.mask, False)
+        ideal_window = patch(self.ideal, self.mask, True)
+        result = []
+        for index in np.flatnonzero(np.abs(g * self.true_px).max(axis=1) <= 0.5):
+            g_px = g[index] * self.true_px
+            g_file = g_px / self.stated_px
+            found = window.maximum(g_px, 1.3 / self.extent_px)
+            background = _background(window, g_px, self.extent_px, lattice_g * self.true_px)
+            power = found[1] if found else float(np.abs(window.amplitude(g_px[:1], g_px[1:]))[0, 0] ** 2)
+            ratio = power / background
+            pulled = _cycles_along(plain, g_px, self.extent_px)
+            pulled_window = _cycles_along(ideal_window, g_px, self.extent_px)
+            moved = pulled is None or abs(pulled) > DISTORTED_CYCLES or found is None
+            bright = "distorted" if moved else "visible" if ratio >= VISIBLE else "marginal"
+            entry: dict[str, Any] = {
+                "hkl": hkl[index].tolist(),
+                "d_lattice_nm": round(float(d_lattice[index]), 7),
+                "g_true_per_nm": _rounded(g[index], 6),
+                "d_true_nm": round(float(1 / np.linalg.norm(g[index])), 7),
+                "g_per_nm": _rounded(g_file, 6),
+                "d_nm": round(float(1 / np.linalg.norm(g_file)), 7),
+                "direction_deg": round(float(np.degrees(np.arctan2(-g_file[0], g_file[1])) % 180), 4),
+                "absent": absent[index],
+                "peak_over_background": round(ratio, 1),
+                "seen": bright if ratio >= MARGINAL else "invisible",
+            }
+            if ratio >= MARGINAL:
+                entry["shape_error_cycles"] = None if pulled is None else round(pulled, 4)
+                entry["window_error_cycles"] = None if pulled_window is None else round(pulled_window, 4)
+            if found and entry["seen"] in ("visible", "distorted"):
+                deviation = np.linalg.norm(g_file) / np.linalg.norm(found[0] / self.stated_px) - 1
+                entry["check_d_deviation"] = round(float(deviation), 6)
+                entry["check_cycles"] = round(float(np.linalg.norm(found[0] - g_px) * self.extent_px), 3)
+            result.append(entry)
+        brightest = max(entry["peak_over_background"] for entry in result)
+        for entry in result:
+            if entry.get("check_cycles", 0) > TOLERANCE_CYCLES and entry["peak_over_background"] < STRONG * brightest:
+                entry["seen"] = "distorted"
+        return result
 
 
 def _cycles_along(region: Patch, g: np.ndarray, extent_px: float) -> float | None:
