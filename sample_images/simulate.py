@@ -9,7 +9,7 @@ Needs, in a virtual environment of its own (the pictures are shipped, nobody nee
     .venv-simulation/bin/pip install ase==3.29.0 abtem==1.0.11 tifffile
     OMP_NUM_THREADS=1 .venv-simulation/bin/python sample_images/simulate.py            # all, or the names of some
 
-Each picture has a fixed seed; the same versions make the same picture. About a minute each on one core.
+Each picture has a fixed seed; the same versions make the same picture. Two to ten seconds each on one core.
 """
 
 import sys
