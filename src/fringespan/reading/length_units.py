@@ -47,7 +47,7 @@ _ANGLES = {"rad", "mrad", "urad", "μrad", "radian", "milliradian", "microradian
 
 _PER_PIXEL = re.compile(r"\s*(?:/|\bper\b)\s*(?:px|pix|pixels?)\s*$", re.IGNORECASE)
 _RECIPROCAL = re.compile(r"^(?:1\s*/|/|per\b|reciprocal\b|inverse\b)\s*(?P<unit>.+)$", re.IGNORECASE)
-_TO_THE_MINUS_ONE = re.compile(r"^(?P<unit>.*\S)\s*(?:\^|\*\*)?\s*\(?-1\)?$")
+_TO_THE_MINUS_ONE = re.compile(r"^(?P<unit>.*?[^\s^*(])\s*(?:\^|\*\*)?\s*\(?-1\)?$")
 _ESCAPED = re.compile(r"\\u([0-9a-fA-F]{4})")
 _PLAIN_WORD = re.compile(r"^[^\W\d_]{1,24}$")
 
@@ -118,6 +118,6 @@ def _by_registry(text: str) -> float | None:
 
     try:
         factor = float(_registry().Quantity(1.0, text).to("nm").magnitude)
-    except (pint.UndefinedUnitError, pint.DimensionalityError, pint.OffsetUnitCalculusError):
+    except (pint.PintError, ValueError):  # ValueError: a word that means a number, such as NaN
         return None
     return factor if math.isfinite(factor) and factor > 0 else None

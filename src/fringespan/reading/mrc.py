@@ -19,7 +19,7 @@ from fringespan.reading.stored_picture import StoredPicture
 
 __all__ = ["open_picture"]
 
-_STAMPS = {0x44: "<", 0x11: ">"}
+_BIG_ENDIAN = 0x11
 _MODES = (0, 1, 2, 3, 4, 6, 12, 101)
 _SOURCE = "MRC header"
 
@@ -37,7 +37,7 @@ def open_picture(path: Path, frame: int) -> StoredPicture:
         raw = file.read(HEADER_DTYPE.itemsize)
     if len(raw) < HEADER_DTYPE.itemsize:
         raise UnreadablePictureError(f"{path}: its MRC header is cut off; copy it again from the microscope")
-    header = _header(raw, path)
+    header = _header(raw)
     columns, rows, count = (int(header[name]) for name in ("nx", "ny", "nz"))
     if min(rows, columns, count) < 1:
         raise UnreadablePictureError(
@@ -49,7 +49,7 @@ def open_picture(path: Path, frame: int) -> StoredPicture:
         raise UnreadablePictureError(
             f"{path}: its pixels are of MRC mode {mode}, which is no plain picture; save it in mode 1, 2 or 6"
         )
-    dtype = dtype_from_mode(mode).newbyteorder(header["mode"].dtype.byteorder)
+    dtype = dtype_from_mode(mode).newbyteorder(header.dtype["mode"].byteorder)
     check_pixel_type(dtype, path)
     start, size = HEADER_DTYPE.itemsize + int(header["nsymbt"]), rows * columns * dtype.itemsize
     found, expected = path.stat().st_size, start + count * size
@@ -64,15 +64,11 @@ def open_picture(path: Path, frame: int) -> StoredPicture:
     return StoredPicture(native_pixels(pixels), count, (stated,), (_PLACEHOLDER,) if placeholder else ())
 
 
-def _header(raw: bytes, path: Path) -> Any:
-    """Return the header in the byte order of its machine stamp, or in the one that makes sense of the mode."""
+def _header(raw: bytes) -> Any:
+    """Return the header in the byte order of its machine stamp, unless only the other one makes sense of the mode."""
     little, big = (np.frombuffer(raw, HEADER_DTYPE.newbyteorder(order))[0] for order in "<>")
-    order = _STAMPS.get(int(little["machst"][0]))
-    if order is None:
-        order = "<" if int(little["mode"]) in _MODES else ">"
-    if int((little if order == "<" else big)["mode"]) not in _MODES and int(little["mode"]) not in _MODES:
-        order = ">"
-    return little if order == "<" else big
+    stamped, other = (big, little) if little["machst"][0] == _BIG_ENDIAN else (little, big)
+    return other if int(stamped["mode"]) not in _MODES and int(other["mode"]) in _MODES else stamped
 
 
 def _pixel_size(header: Any) -> StatedPixelSize:

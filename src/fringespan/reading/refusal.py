@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import operator
 import struct
+import tokenize
 import zlib
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -30,6 +31,7 @@ _DECODER_FAILURES = (
     TypeError,
     ValueError,
     struct.error,
+    tokenize.TokenError,
     zlib.error,
 )
 

@@ -189,8 +189,11 @@ def _one_value_a_pixel(
             cast("np.dtype[Any]", page.dtype).newbyteorder("="),
             lambda rows, columns: read(rows, columns)[..., 0],
         )
-    if photometric == _PALETTE and samples == 1 and page.colormap is not None:
-        table = luminance(np.moveaxis(np.asarray(page.colormap), 0, -1))
+    if photometric == _PALETTE and samples == 1:
+        palette = np.asarray(page.colormap)
+        if palette.ndim != 2 or palette.shape[0] != 3 or not palette.shape[1] or palette.dtype.kind != "u":
+            raise UnreadablePictureError(f"{path}: its palette of colours is damaged; save it as a grey picture")
+        table = luminance(palette.T)
         cautions.append(COLOUR)
         return PartialPixels(
             shape, np.float32, lambda rows, columns: table[np.minimum(read(rows, columns)[..., 0], len(table) - 1)]
