@@ -34,6 +34,8 @@ def _png(content: bytes, path: Path) -> StoredPicture:
         _check_size(header, content, path)
         # Pillow turns the chunk's pixels per metre into dots per inch
         dpi = header.info.get("dpi")
+        # checks the sums of all chunks, which the decoder below takes for granted
+        header.verify()
     stated: tuple[StatedPixelSize, ...] = ()
     if dpi is not None:
         stated = (_per_unit(dpi[1] / _INCH_M, dpi[0] / _INCH_M, "m", "pHYs chunk"),)

@@ -195,9 +195,11 @@ def _one_value_a_pixel(
             raise UnreadablePictureError(f"{path}: its palette of colours is damaged; save it as a grey picture")
         table = luminance(palette.T)
         cautions.append(COLOUR)
-        return PartialPixels(
-            shape, np.float32, lambda rows, columns: table[np.minimum(read(rows, columns)[..., 0], len(table) - 1)]
-        )
+
+        def look_up(rows: slice, columns: slice) -> NDArray[np.generic]:
+            return table.take(read(rows, columns)[..., 0].astype(np.intp), mode="clip")
+
+        return PartialPixels(shape, np.float32, look_up)
     # colours that JPEG stores as brightness and hue come out of its decoder as red, green, blue
     in_colour = photometric == _COLOURS or (photometric == _JPEG_COLOURS and page.compression in _JPEG_COMPRESSIONS)
     if in_colour and samples >= 3:
