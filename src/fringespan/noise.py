@@ -20,8 +20,8 @@ from fringespan.spectrum import PowerSpectrum
 __all__ = ["RingBackground", "ring_background"]
 
 _SAMPLES = 160
-_INDEPENDENT_SHARE = 0.85
-"""Independent samples per bin of a ring: the window makes neighbours alike (1 / 2.2), smoothing adds other rings (1.9)."""
+_INDEPENDENT_SHARE = 1.2
+"""Independent samples per bin of a ring: the window makes neighbours alike (1 / 2.2), smoothing adds other rings (2.6)."""
 
 _TABLE_STEPS = 4
 """Entries of the background table per ring unit."""
@@ -109,7 +109,7 @@ def _rings(shape: tuple[int, int], aspect: float) -> _Rings:
 
 
 @numba.njit(cache=True, nogil=True)
-def _kth(values, k):  # type: ignore[no-untyped-def]
+def kth_smallest(values, k):  # type: ignore[no-untyped-def]
     """Return the k-th smallest value, reordering `values`."""
     low, high = 0, values.size - 1
     while low < high:
@@ -170,18 +170,21 @@ def _ring_density(power, samples, counts, position, table):  # type: ignore[no-u
             buffer[i] = flat[samples[k, i]]
         values = buffer[: counts[k]]
         if k == 0:
-            centre = max(_kth(values, values.size // 2) / np.float32(0.6931472), np.float32(1e-30))
+            centre = max(kth_smallest(values, values.size // 2) / np.float32(0.6931472), np.float32(1e-30))
         # from ring to ring the background changes little, so the last one is a guess that no peak has spoiled
         centre = trimmed_mean(values, centre, 4)
         logs[k] = np.log(centre)
-    smooth = np.empty(n)
-    for k in range(n):
-        smooth[k] = logs[k]
-        if 0 < k < n - 1:
-            # binomial mean of three, but not across the bend of a transfer ring that stands out of the scatter
-            bend = logs[k - 1] - 2 * logs[k] + logs[k + 1]
-            scatter = 6 * 2.2 / counts[k]
-            smooth[k] += 0.25 * bend * scatter / (scatter + max(bend * bend - scatter, 0.0))
+    # binomial means of three, first of neighbours, then of neighbours' neighbours, but not across the bend of a transfer
+    # ring that stands out of the scatter
+    smooth = logs.copy()
+    scatter_left = 2.2
+    for reach in (1, 2):
+        for k in range(reach, n - reach):
+            bend = logs[k - reach] - 2 * logs[k] + logs[k + reach]
+            scatter = 6 * scatter_left / counts[k]
+            smooth[k] = logs[k] + 0.25 * bend * scatter / (scatter + max(bend * bend - scatter, 0.0))
+        logs[:] = smooth
+        scatter_left *= 0.5
     for i in range(table.size):
         p = position[i]
         k = min(int(p), n - 2) if n > 1 else 0

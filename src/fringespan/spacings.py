@@ -105,7 +105,7 @@ class PairAngle:
 
 
 def peaks_from_waves(micrograph, placed, fit):
-    inv = np.linalg.inv(micrograph.geometry_nm_per_px).T
+    inv = np.eye(2) if micrograph.geometry_nm_per_px is None else np.linalg.inv(micrograph.geometry_nm_per_px).T
     out = []
     order = np.argsort(-fit.power_ratio)
     for k in order:

@@ -37,6 +37,25 @@ class Demodulation:
     block: int
     moments: NDArray[np.complex128]
 
+    def part(self, which: NDArray[np.bool_] | NDArray[np.intp]) -> Demodulation:
+        """Return that of some of the frequencies."""
+        return Demodulation(self.frequency[which], self.blocks[which], self.block, self.moments[which])
+
+    def joined(self, other: Demodulation) -> Demodulation:
+        """Return that of these frequencies and then the other's."""
+        return Demodulation(
+            np.concatenate([self.frequency, other.frequency]),
+            np.concatenate([self.blocks, other.blocks]),
+            self.block,
+            np.concatenate([self.moments, other.moments]),
+        )
+
+    def replaced(self, which: NDArray[np.bool_], new: Demodulation) -> Demodulation:
+        """Return that with some of the frequencies replaced by new ones."""
+        frequency, blocks, moments = self.frequency.copy(), self.blocks.copy(), self.moments.copy()
+        frequency[which], blocks[which], moments[which] = new.frequency, new.blocks, new.moments
+        return Demodulation(frequency, blocks, self.block, moments)
+
 
 @numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
 def _demodulate(values, spans, trend, frequency, size, blocks, moments):  # type: ignore[no-untyped-def]

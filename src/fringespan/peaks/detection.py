@@ -7,6 +7,8 @@ judged by its fitted amplitude.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import lru_cache
 
@@ -15,16 +17,16 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.special import lambertw
 
-from fringespan.noise import RingBackground, trimmed_mean
+from fringespan.noise import RingBackground, kth_smallest, trimmed_mean
 from fringespan.region import Footprint
 from fringespan.spectrum import PowerSpectrum, taper
 
-__all__ = ["Candidates", "detection_threshold", "find_candidates"]
+__all__ = ["Candidates", "detection_threshold", "density_at", "find_candidates", "waves_removed"]
 
-_FIRST_PASS = 0.28
+_FIRST_PASS = 0.36
 """Share of the detection threshold that a bin alone must reach over the rings; a tapered bin between two sees a third."""
 
-_MATCHED_PASS = 0.74
+_MATCHED_PASS = 0.79
 """Share of the detection threshold that the matched filter must reach over the local noise."""
 
 _MOST_CANDIDATES = 4096
@@ -73,15 +75,16 @@ def detection_threshold(pixel_count: int, false_peaks_per_region: float) -> floa
     .. [1] K. J. Worsley, "Local maxima and the expected Euler characteristic of excursion sets of chi-squared, F and t
        fields", Adv. Appl. Prob. 26 (1994) 13-42.
     """
-    rate = false_peaks_per_region / (pixel_count / 2 * (4 * np.pi**2 / 12) / (2 * np.pi))
+    # a third off, for what noise estimated from the picture itself adds to the theory
+    rate = 0.67 * false_peaks_per_region / (pixel_count / 2 * (4 * np.pi**2 / 12) / (2 * np.pi))
     # (2 t - 1) exp(-t) = rate has the closed solution t = 1/2 - W_{-1}(-rate exp(1/2) / 2)
     return float(0.5 - lambertw(-rate * np.exp(0.5) / 2, -1).real)
 
 
 @dataclass(frozen=True, eq=False, slots=True)
 class _MatchedFilter:
-    coarse: NDArray[np.complex64]
-    fine: NDArray[np.complex64]
+    coarse: NDArray[np.float32]
+    fine: NDArray[np.float32]
 
 
 @lru_cache(maxsize=32)
@@ -103,11 +106,14 @@ def _matched_filter(footprint: Footprint) -> _MatchedFilter:
     covariance += 1e-5 * covariance[0, 0].real * np.eye(49)
     inverse = np.linalg.inv(covariance)
 
-    def filters(offsets: NDArray[np.float64]) -> NDArray[np.complex64]:
+    def filters(offsets: NDArray[np.float64]) -> NDArray[np.float32]:
         b = responses(offsets)
         weighted = b @ inverse.T
         norm = np.sqrt(np.einsum("ij,ij->i", b.conj(), weighted).real)
-        return np.ascontiguousarray((weighted / norm[:, None]).conj(), dtype=np.complex64)
+        # padded to a whole number of vector lanes
+        parts = np.zeros((len(b), 2, 56), np.float32)
+        parts[:, 0, :49], parts[:, 1, :49] = (weighted / norm[:, None]).real, -(weighted / norm[:, None]).imag
+        return parts
 
     return _MatchedFilter(filters(_COARSE), filters(_FINE))
 
@@ -163,28 +169,37 @@ def _power_at(power, i, j, nx):  # type: ignore[no-untyped-def]
 
 
 @numba.njit(cache=True, nogil=True)
+def _mirrored(i, j, ny, nx):  # type: ignore[no-untyped-def]
+    """Return the stored bin of (i, j), and whether it is the conjugate one."""
+    if j < 0:
+        return (-i) % ny, -j, True
+    if j > nx // 2:
+        return (-i) % ny, nx - j, True
+    return i % ny, j, False
+
+
+@numba.njit(cache=True, nogil=True)
 def _gather(transform, i, j, nx, bins):  # type: ignore[no-untyped-def]
     """Copy the 7 x 7 complex bins around (i, j)."""
     ny = transform.shape[0]
     for dy in range(-3, 4):
         for dx in range(-3, 4):
-            ii = i + dy
-            jj = j + dx
-            if jj < 0:
-                bins[(dy + 3) * 7 + dx + 3] = np.conj(transform[(-ii) % ny, -jj])
-            elif jj > nx // 2:
-                bins[(dy + 3) * 7 + dx + 3] = np.conj(transform[(-ii) % ny, nx - jj])
-            else:
-                bins[(dy + 3) * 7 + dx + 3] = transform[ii % ny, jj]
+            row, column, conjugate = _mirrored(i + dy, j + dx, ny, nx)
+            z = transform[row, column]
+            place = (dy + 3) * 7 + dx + 3
+            bins[0, place] = z.real
+            bins[1, place] = -z.imag if conjugate else z.imag
 
 
 @numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
 def _filtered(filters, k, bins):  # type: ignore[no-untyped-def]
+    """Return |h^T z|^2; real and imaginary parts lie apart, so that the sums run in vectors."""
+    h_re, h_im, z_re, z_im = filters[k, 0], filters[k, 1], bins[0], bins[1]
     re = np.float32(0)
     im = np.float32(0)
-    for b in range(49):
-        re += filters[k, b].real * bins[b].real - filters[k, b].imag * bins[b].imag
-        im += filters[k, b].real * bins[b].imag + filters[k, b].imag * bins[b].real
+    for b in range(z_re.size):
+        re += h_re[b] * z_re[b] - h_im[b] * z_im[b]
+        im += h_re[b] * z_im[b] + h_im[b] * z_re[b]
     return re * re + im * im
 
 
@@ -206,13 +221,12 @@ def ring_at(table, fy, fx):  # type: ignore[no-untyped-def]
 
 
 @numba.njit(cache=True, nogil=True)
-def _line_noise(power, table, step_y, step_x, nx, y, x, dy, dx, near, far):  # type: ignore[no-untyped-def]
-    """Return the log of the noise over the rings on a line through (y, x) along (dy, dx), near..far bins away, and the count.
+def _line_noise(power, table, step_y, step_x, nx, y, x, dy, dx, near, far, buffer):  # type: ignore[no-untyped-def]
+    """Return the noise over the rings on a line through (y, x) along (dy, dx), near..far bins away, and the count.
 
-    The mean of the logarithms of both sides: exact where the power follows a power law along the line. 0.5772 is Euler's
-    constant, the logarithmic mean of a unit exponential variable.
+    From the median, so that a strong peak that the line crosses does not count; ln 2 is the median of a unit exponential
+    variable.
     """
-    total = 0.0
     n = 0
     for k in range(near, far + 1):
         for sign in (-1, 1):
@@ -224,11 +238,28 @@ def _line_noise(power, table, step_y, step_x, nx, y, x, dy, dx, near, far):  # t
             fx = j * step_x
             if fy * fy + fx * fx < 6.25:
                 continue
-            total += np.log(_power_at(power, i, j, nx) / ring_at(table, fy, fx) + 1e-30)
+            buffer[n] = _power_at(power, i, j, nx) / ring_at(table, fy, fx)
             n += 1
     if n < 8:
         return 0.0, 0
-    return total / n + 0.5772157, n
+    return kth_smallest(buffer[:n], n // 2) / 0.6931472, n
+
+
+@numba.njit(cache=True, nogil=True)
+def _leakage(power, nx, i, j):  # type: ignore[no-untyped-def]
+    """Return what leaks from bins along both axes into an untapered wave at (i, j): the tail 1 / (2 pi^2 k^2) of its kernel.
+
+    The tapered spectrum hardly shows it: the streak of an edge, scan-line noise, and large slow variations do it.
+    """
+    total = 0.0
+    for k in range(3, 25):
+        share = 1 / (2 * np.pi**2 * k * k)
+        for sign in (-1, 1):
+            if abs(i + sign * k) <= power.shape[0] // 2:
+                total += share * _power_at(power, i + sign * k, j, nx)
+            if abs(j + sign * k) <= nx // 2:
+                total += share * _power_at(power, i, j + sign * k, nx)
+    return total
 
 
 @numba.njit(cache=True, nogil=True)
@@ -269,7 +300,7 @@ def local_density(power, table, ring_samples, step_y, step_x, nx, y, x, buffer):
         density = here * (1 + weight * excess)
         samples = 1 / (1 / ring_count + weight * weight / local_count)
     norm = np.sqrt(y * y + x * x) + 1e-9
-    relative = np.log(density / here)
+    relative = density / here
     best = relative
     best_samples = samples
     # a straight line leaves the arc of its radius by k^2 / 2 r, so its reach grows with the root of the radius
@@ -293,12 +324,16 @@ def local_density(power, table, ring_samples, step_y, step_x, nx, y, x, buffer):
         if abs(y) < 4.5 and guard == 0:
             py = np.trunc(y)
             far = 20
-        value, count = _line_noise(power, table, step_y, step_x, nx, py, px, dy, dx, near, far)
-        # a mean of logarithms scatters by pi / sqrt(6 n); 3.3 of these, with the line's own correlation, stand out
-        if count >= 8 and value > relative + 3.3 * 1.2825 * np.sqrt(1.6 / count) and value > best:
+        value, count = _line_noise(power, table, step_y, step_x, nx, py, px, dy, dx, near, far, buffer)
+        # such a median scatters by 1 / (sqrt(n) ln 2); 3.3 of these, with the line's own correlation, stand out
+        if count >= 8 and value > best and value > relative * np.exp(3.3 * 1.4427 * np.sqrt(1.6 / count)):
             best = value
-            best_samples = count / 1.6 / 1.645
-    return here * np.exp(best), best_samples
+            best_samples = count / 1.6 / 2.08
+    leaked = _leakage(power, nx, iy, ix)
+    if leaked > 0.5 * here * best:
+        best += leaked / here
+        best_samples = min(best_samples, 30.0)
+    return here * best, best_samples
 
 
 @numba.njit(cache=True, nogil=True)
@@ -310,7 +345,7 @@ def _search(  # type: ignore[no-untyped-def]
     ny = power.shape[0]
     columns = power.shape[1]
     found = 0
-    bins = np.empty(49, np.complex64)
+    bins = np.zeros((2, 56), np.float32)
     score = np.empty(fine.shape[0])
     buffer = np.empty(512, np.float32)
     side = int(np.rint(np.sqrt(fine.shape[0])))
@@ -410,9 +445,186 @@ def find_candidates(
     count = _search(
         spectrum.power, spectrum.transform, spectrum.block_maxima,
         _block_radii(spectrum.shape, background.step, 4), background.density, background.samples,
-        *background.step, nx,
-        footprint.shape[0] / ny, footprint.shape[1] / nx, smallest_distance_bins,
+        *background.step, nx, footprint.shape[0] / ny, footprint.shape[1] / nx, smallest_distance_bins,
         np.float32(_FIRST_PASS * threshold), _MATCHED_PASS * threshold, matched.coarse, matched.fine, out,
     )  # fmt: skip
     found = out[:count]
     return Candidates(found[:, :2] / (ny, nx), found[:, 2], found[:, 3], found[:, 4])
+
+
+def density_at(
+    spectrum: PowerSpectrum, background: RingBackground, frequency: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return the noise power density at some frequencies and the number of independent samples each rests on.
+
+    Parameters
+    ----------
+    spectrum : PowerSpectrum
+    background : RingBackground
+    frequency : ndarray, shape (n, 2)
+        (row, column) in cycles per pixel.
+
+    Returns
+    -------
+    density, samples : ndarray, shape (n,)
+    """
+    out = np.empty((2, len(frequency)))
+    _densities(
+        spectrum.power, background.density, background.samples, *background.step, spectrum.shape[1],
+        frequency * spectrum.shape, out,
+    )  # fmt: skip
+    return out[0], out[1]
+
+
+@numba.njit(cache=True, nogil=True)
+def _densities(power, table, ring_samples, step_y, step_x, nx, place, out):  # type: ignore[no-untyped-def]
+    buffer = np.empty(512, np.float32)
+    for k in range(place.shape[0]):
+        out[0, k], out[1, k] = local_density(
+            power, table, ring_samples, step_y, step_x, nx, place[k, 0], place[k, 1], buffer
+        )
+
+
+@contextmanager
+def waves_removed(
+    spectrum: PowerSpectrum, footprint: Footprint, frequency: NDArray[np.float64], amplitude: NDArray[np.complex128]
+) -> Iterator[PowerSpectrum]:
+    """Take fitted waves out of the bins around them, for as long as the context lasts.
+
+    In place, since a copy of a large spectrum would cost as much as a tenth of its transform.
+
+    Parameters
+    ----------
+    spectrum : PowerSpectrum
+    footprint : Footprint
+    frequency : ndarray, shape (n, 2)
+        (row, column) in cycles per pixel.
+    amplitude : ndarray of complex128, shape (n,)
+        As in `JointFit`.
+    """
+    window = _window_response(footprint)
+    shape = np.array(spectrum.shape)
+    middle = (np.array(footprint.shape) - 1) / 2
+    reach = window.reach
+    saved = np.empty((len(frequency), 2 * reach + 1, 2 * reach + 1), np.complex64)
+    block_maxima = spectrum.block_maxima.copy()
+    scale = np.float32(1 / taper(footprint).power)
+    arguments = spectrum.transform, spectrum.power, spectrum.block_maxima, scale, spectrum.shape[1], reach
+    _remove(
+        *arguments, frequency * shape, amplitude, middle / shape, window.rows, window.columns, window.plane, saved
+    )
+    try:
+        yield spectrum
+    finally:
+        _restore(*arguments, frequency * shape, saved)
+        spectrum.block_maxima[:] = block_maxima
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _WindowResponse:
+    """Transform of a window about its middle, in steps of 1 / 16 bin (rows, columns) or 1 / 8 bin (plane)."""
+
+    rows: NDArray[np.float64]
+    columns: NDArray[np.float64]
+    plane: NDArray[np.complex128]
+    reach: int
+
+
+@lru_cache(maxsize=32)
+def _window_response(footprint: Footprint) -> _WindowResponse:
+    window = taper(footprint)
+    middle = (np.array(footprint.shape) - 1) / 2 / window.transform_shape
+    if window.oblique is None:
+        reach = 20
+        shift = np.arange(-16 * (reach + 2), 16 * (reach + 2) + 1) / 16
+        grid = window_transform(footprint, shift, np.zeros(1), power=1)[:, 0] * np.exp(-2j * np.pi * shift * middle[0])
+        rows = grid.real / grid.real.max()
+        grid = window_transform(footprint, np.zeros(1), shift, power=1)[0] * np.exp(-2j * np.pi * shift * middle[1])
+        return _WindowResponse(rows, grid.real / grid.real.max() * window.total, np.empty((0, 0), complex), reach)
+    reach = 10
+    shift = np.arange(-8 * (reach + 2), 8 * (reach + 2) + 1) / 8
+    plane = window_transform(footprint, shift, shift, power=1)
+    plane *= np.exp(-2j * np.pi * (shift[:, None] * middle[0] + shift[None] * middle[1]))
+    return _WindowResponse(np.empty(0), np.empty(0), plane, reach)
+
+
+@numba.njit(cache=True, nogil=True, inline="always")
+def _cubic_weights(f):  # type: ignore[no-untyped-def]
+    """Return the four Lagrange weights of cubic interpolation at fraction f between the middle two points."""
+    return (
+        -f * (f - 1) * (f - 2) / 6,
+        (f + 1) * (f - 1) * (f - 2) / 2,
+        -(f + 1) * f * (f - 2) / 2,
+        (f + 1) * f * (f - 1) / 6,
+    )
+
+
+@numba.njit(cache=True, nogil=True)
+def _remove(  # type: ignore[no-untyped-def]
+    transform, power, block_maxima, scale, nx, reach, place, amplitude, middle, rows, columns, plane, saved
+):
+    ny = transform.shape[0]
+    width = 2 * reach + 1
+    line_y = np.empty(width, np.complex128)
+    line_x = np.empty(width, np.complex128)
+    for k in range(place.shape[0]):
+        iy, ix = int(np.rint(place[k, 0])), int(np.rint(place[k, 1]))
+        for a in range(width):
+            i, j = iy + a - reach, ix + a - reach
+            line_y[a] = np.exp(-2j * np.pi * i * middle[0])
+            line_x[a] = np.exp(-2j * np.pi * j * middle[1])
+            if rows.size:
+                p = (place[k, 0] - i) * 16 + rows.size // 2
+                q = int(np.floor(p))
+                w = _cubic_weights(p - q)
+                line_y[a] *= w[0] * rows[q - 1] + w[1] * rows[q] + w[2] * rows[q + 1] + w[3] * rows[q + 2]
+                p = (place[k, 1] - j) * 16 + columns.size // 2
+                q = int(np.floor(p))
+                w = _cubic_weights(p - q)
+                line_x[a] *= w[0] * columns[q - 1] + w[1] * columns[q] + w[2] * columns[q + 1] + w[3] * columns[q + 2]
+        for a in range(width):
+            for b in range(width):
+                value = amplitude[k] * line_y[a] * line_x[b]
+                if plane.shape[0]:
+                    p = (place[k, 0] - (iy + a - reach)) * 8 + plane.shape[0] // 2
+                    q = int(np.floor(p))
+                    wy = _cubic_weights(p - q)
+                    p = (place[k, 1] - (ix + b - reach)) * 8 + plane.shape[1] // 2
+                    r = int(np.floor(p))
+                    wx = _cubic_weights(p - r)
+                    response = 0j
+                    for m in range(4):
+                        for n in range(4):
+                            response += wy[m] * wx[n] * plane[q - 1 + m, r - 1 + n]
+                    value *= response
+                i, j, conjugate = _mirrored(iy + a - reach, ix + b - reach, ny, nx)
+                saved[k, a, b] = transform[i, j]
+                z = transform[i, j] - (np.conj(value) if conjugate else value)
+                transform[i, j] = z
+                power[i, j] = (z.real * z.real + z.imag * z.imag) * scale
+    for k in range(place.shape[0]):
+        iy, ix = int(np.rint(place[k, 0])), int(np.rint(place[k, 1]))
+        # every block of eight that the square touches
+        for a in range(-reach, reach + 8, 8):
+            for b in range(-reach, reach + 8, 8):
+                i, j, _ = _mirrored(iy + min(a, reach), ix + min(b, reach), ny, nx)
+                by, bx = i // 8, j // 8
+                highest = np.float32(0)
+                for y in range(8 * by, min(8 * by + 8, ny)):
+                    for x in range(8 * bx, min(8 * bx + 8, power.shape[1])):
+                        highest = max(highest, power[y, x])
+                block_maxima[by, bx] = highest
+
+
+@numba.njit(cache=True, nogil=True)
+def _restore(transform, power, block_maxima, scale, nx, reach, place, saved):  # type: ignore[no-untyped-def]
+    ny = transform.shape[0]
+    # backwards, so that where two squares overlap the first saved value comes last
+    for k in range(place.shape[0] - 1, -1, -1):
+        iy, ix = int(np.rint(place[k, 0])), int(np.rint(place[k, 1]))
+        for a in range(2 * reach, -1, -1):
+            for b in range(2 * reach, -1, -1):
+                i, j, _ = _mirrored(iy + a - reach, ix + b - reach, ny, nx)
+                z = saved[k, a, b]
+                transform[i, j] = z
+                power[i, j] = (z.real * z.real + z.imag * z.imag) * scale

@@ -3,17 +3,23 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
 
 from fringespan.noise import RingBackground
-from fringespan.peaks.detection import detection_threshold, find_candidates
+from fringespan.peaks.demodulation import demodulate
+from fringespan.peaks.detection import Candidates, density_at, detection_threshold, find_candidates, waves_removed
 from fringespan.peaks.joint_fit import JointFit, fit_jointly
 from fringespan.peaks.misfit import MISFIT_LIMIT, CellResiduals, cell_residuals, split_wave
 from fringespan.spectrum import PowerSpectrum, RegionPixels
 
 __all__ = ["Fringes", "find_fringes"]
+
+_STRONG = 4.0
+"""A fringe this many times above the detection threshold is fitted before weaker ones are looked for."""
+
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -62,20 +68,53 @@ def find_fringes(
     """
     footprint = pixels.footprint
     threshold = detection_threshold(footprint.count, false_peaks_per_region)
-    candidates = find_candidates(
-        spectrum, background, footprint, threshold=threshold, smallest_distance_bins=smallest_distance_bins
+    search = partial(find_candidates, background=background, footprint=footprint)
+    # strong fringes first: their side lobes would hide weak ones, and pass for some
+    strong = _supported(
+        search(
+            spectrum, threshold=_STRONG * threshold, smallest_distance_bins=smallest_distance_bins
+        ),
+        threshold,
     )
-    # the density is itself an estimate from m samples: the law is F, not exponential
-    limit = candidates.samples * np.expm1(threshold / candidates.samples)
-    # the untapered fit sees the leakage of edges and scan lines, the tapered filter does not: it has to agree
-    supported = ((np.sqrt(candidates.ratio) + 0.35) / 0.93) ** 2 >= limit
-    frequency, density, limit = candidates.frequency[supported], candidates.density[supported], limit[supported]
-    fit, kept = fit_jointly(pixels, frequency, density, limit)
+    start = demodulate(pixels, strong.frequency)
+    fit, kept = fit_jointly(pixels, start, strong.density, strong.limit)
+    density, limit = strong.density[kept], strong.limit[kept]
+    with waves_removed(spectrum, footprint, fit.frequency, fit.amplitude) as rest:
+        if len(kept):
+            density, samples = density_at(rest, background, fit.frequency)
+            limit = _limit(threshold, samples)
+        weak = _supported(search(rest, threshold=threshold, smallest_distance_bins=smallest_distance_bins), threshold)
+    if len(weak.density):
+        start = fit.demodulation.joined(demodulate(pixels, weak.frequency))
+        density, limit = np.concatenate([density, weak.density]), np.concatenate([limit, weak.limit])
+    else:
+        start = fit.demodulation
+    fit, kept = fit_jointly(pixels, start, density, limit)
     density, limit = density[kept], limit[kept]
     residuals = cell_residuals(footprint, fit, density)
     if (residuals.misfit > MISFIT_LIMIT).any():
         fit, density, limit, residuals = _with_splits(pixels, fit, density, limit, residuals)
     return Fringes(fit, density, limit, residuals)
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _Supported:
+    frequency: NDArray[np.float64]
+    density: NDArray[np.float64]
+    limit: NDArray[np.float64]
+
+
+def _supported(candidates: Candidates, threshold: float) -> _Supported:
+    """Return the candidates whose matched filter lets hope that the fit will pass, with the limit it has to pass."""
+    limit = _limit(threshold, candidates.samples)
+    # the untapered fit sees the leakage of edges and scan lines, the tapered filter does not: it has to agree
+    hopeful = ((np.sqrt(candidates.ratio) + 0.35) / 0.93) ** 2 >= limit
+    return _Supported(candidates.frequency[hopeful], candidates.density[hopeful], limit[hopeful])
+
+
+def _limit(threshold: float, samples: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the power ratio to be reached: the noise is itself estimated from samples, so F law, not exponential."""
+    return np.asarray(samples * np.expm1(threshold / samples))
 
 
 def _with_splits(
@@ -96,7 +135,7 @@ def _with_splits(
         frequency = np.concatenate([fit.frequency[others], fit.frequency[k] + shifts])
         trial_density = np.concatenate([density[others], density[[k, k]]])
         trial_limit = np.concatenate([limit[others], limit[[k, k]]])
-        trial, kept = fit_jointly(pixels, frequency, trial_density, trial_limit)
+        trial, kept = fit_jointly(pixels, demodulate(pixels, frequency), trial_density, trial_limit)
         if len(kept) < len(frequency):
             continue
         trial_residuals = cell_residuals(footprint, trial, trial_density)

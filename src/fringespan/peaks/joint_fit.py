@@ -242,15 +242,15 @@ def _frequency_covariance(damped, density):  # type: ignore[no-untyped-def]
 
 
 def fit_jointly(
-    pixels: RegionPixels, frequency: NDArray[np.float64], density: NDArray[np.float64], threshold: NDArray[np.float64]
+    pixels: RegionPixels, start: Demodulation, density: NDArray[np.float64], threshold: NDArray[np.float64]
 ) -> tuple[JointFit, NDArray[np.intp]]:
     """Fit plane waves to a region, starting from frequencies within about half a bin of the truth.
 
     Parameters
     ----------
     pixels : RegionPixels
-    frequency : ndarray, shape (n, 2)
-        (row, column) in cycles per pixel.
+    start : Demodulation
+        Of these pixels at the n frequencies to start from.
     density : ndarray, shape (n,)
         Noise power density at each.
     threshold : ndarray, shape (n,)
@@ -263,9 +263,9 @@ def fit_jointly(
     kept : ndarray of int, shape (m,)
         Which of the n they are.
     """
-    kept = np.arange(len(frequency))
+    kept = np.arange(len(start.frequency))
+    demodulation = start
     bins = 1 / np.array(pixels.footprint.shape)
-    demodulation = demodulate(pixels, np.array(frequency, dtype=float))
     for round_number in range(_MOST_STEPS):
         while True:
             amplitude, step, covariance = solve_waves(pixels.footprint, demodulation, density[kept])
@@ -274,27 +274,21 @@ def fit_jointly(
             strong = power_ratio >= threshold[kept] * (0.85 if round_number == 0 else 1.0)
             if strong.all():
                 break
-            kept, demodulation = kept[strong], _part(demodulation, strong)
-        n = len(kept)
-        if n == 0:
+            kept, demodulation = kept[strong], demodulation.part(strong)
+        if len(kept) == 0:
             break
-        longest = np.abs(step / bins).max(axis=1)
-        # never further than a linear step can be trusted: half a bin
-        step *= np.minimum(1, 0.5 / np.maximum(longest, 1e-9))[:, None]
-        sigma = np.sqrt(np.diag(covariance).reshape(n, 2)) / bins
+        in_bins = step / bins
+        longest = np.abs(in_bins).max(axis=1)
+        sigma = np.sqrt(np.diag(covariance)).reshape(-1, 2) / bins
         # the error left after a step of d bins is of third order in d
         settled = (5 * longest**3 < 0.05 * sigma.min(axis=1)) | (longest < 1e-4)
         if settled.all() and (power_ratio >= threshold[kept]).all():
             break
-        demodulation = demodulate(pixels, demodulation.frequency + step)
+        # never further than a linear step can be trusted: half a bin
+        step *= np.minimum(1, 0.5 / np.maximum(longest, 1e-9))[:, None]
+        demodulation = demodulation.replaced(~settled, demodulate(pixels, (demodulation.frequency + step)[~settled]))
     frequency = demodulation.frequency + step if len(kept) else np.empty((0, 2))
     return JointFit(frequency, amplitude, covariance, power_ratio, demodulation), kept
-
-
-def _part(demodulation: Demodulation, which: NDArray[np.bool_]) -> Demodulation:
-    return Demodulation(
-        demodulation.frequency[which], demodulation.blocks[which], demodulation.block, demodulation.moments[which]
-    )
 
 
 def solve_waves(
