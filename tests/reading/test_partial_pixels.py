@@ -13,7 +13,9 @@ from fringespan.reading.partial_pixels import PartialPixels, SegmentedPixels, lu
 PICTURE = np.arange(35 * 27, dtype=np.uint16).reshape(35, 27)
 
 
-def segmented(shape: tuple[int, int], decoded: list[tuple[int, int]] | None = None) -> PartialPixels:
+def segmented(
+    shape: tuple[int, int], decoded: list[tuple[int, int]] | None = None, keep_bytes: int = 2**20
+) -> PartialPixels:
     height, width = shape
 
     def decode(i: int, j: int) -> np.ndarray:
@@ -21,7 +23,8 @@ def segmented(shape: tuple[int, int], decoded: list[tuple[int, int]] | None = No
             decoded.append((i, j))
         return PICTURE[i * height : (i + 1) * height, j * width : (j + 1) * width]
 
-    return PartialPixels(PICTURE.shape, np.uint16, SegmentedPixels(PICTURE.shape, shape, np.uint16, decode).read)
+    segments = SegmentedPixels(PICTURE.shape, shape, np.uint16, decode, keep_bytes=keep_bytes)
+    return PartialPixels(PICTURE.shape, np.uint16, segments.read)
 
 
 SLICES = st.builds(
@@ -45,10 +48,9 @@ def test_only_the_segments_touched_are_decoded_and_each_once() -> None:
     assert sorted(decoded) == [(1, 0), (1, 1), (2, 0), (2, 1)]
 
 
-def test_what_was_used_last_is_kept_within_a_limit(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("fringespan.reading.partial_pixels._CACHE_BYTES", 3 * 128)
+def test_what_was_used_last_is_kept_within_a_limit() -> None:
     decoded: list[tuple[int, int]] = []
-    pixels = segmented((8, 8), decoded)
+    pixels = segmented((8, 8), decoded, keep_bytes=3 * 128)
     for column in (0, 8, 16, 0):  # three segments of 128 bytes fit
         pixels[0:8, column : column + 8]
     assert decoded == [(0, 0), (0, 1), (0, 2)]

@@ -17,8 +17,6 @@ __all__ = ["PartialPixels", "RectangleReader", "SegmentedPixels", "luminance", "
 RectangleReader = Callable[[slice, slice], NDArray[np.generic]]
 """Returns the pixels of rows and columns given as slices with plain bounds and step 1."""
 
-_CACHE_BYTES = 64 * 2**20
-
 _LUMINANCE = np.array([0.2126, 0.7152, 0.0722], dtype=np.float32)
 """Weights of red, green, blue by Recommendation ITU-R BT.709."""
 
@@ -93,6 +91,8 @@ class SegmentedPixels:
         Type of a sample.
     decode : callable
         Returns segment (i, j), counted down and to the right, shaped (rows, columns[, samples]).
+    keep_bytes : int, optional
+        How much to keep; the segment used last is always kept.
     """
 
     def __init__(
@@ -101,11 +101,14 @@ class SegmentedPixels:
         segment_shape: tuple[int, int],
         dtype: DTypeLike,
         decode: Callable[[int, int], NDArray[np.generic]],
+        *,
+        keep_bytes: int = 64 * 2**20,
     ) -> None:
         self._shape = shape
         self._segment_shape = segment_shape
         self._dtype = np.dtype(dtype)
         self._decode = decode
+        self._keep_bytes = keep_bytes
         self._kept: OrderedDict[tuple[int, int], NDArray[np.generic]] = OrderedDict()
         self._kept_bytes = 0
         self._lock = threading.Lock()
@@ -136,6 +139,6 @@ class SegmentedPixels:
             if (i, j) not in self._kept:
                 self._kept[i, j] = segment
                 self._kept_bytes += segment.nbytes
-            while self._kept_bytes > _CACHE_BYTES and len(self._kept) > 1:
+            while self._kept_bytes > self._keep_bytes and len(self._kept) > 1:
                 self._kept_bytes -= self._kept.popitem(last=False)[1].nbytes
         return segment
