@@ -338,8 +338,23 @@ def local_density(power, table, ring_samples, step_y, step_x, nx, y, x, buffer):
 
 @numba.njit(cache=True, nogil=True)
 def _search(  # type: ignore[no-untyped-def]
-    power, transform, block_maxima, radii, table, ring_samples, step_y, step_x, nx, bin_y, bin_x, nearest,
-    first_threshold, matched_threshold, coarse, fine, out
+    power,
+    transform,
+    block_maxima,
+    radii,
+    table,
+    ring_samples,
+    step_y,
+    step_x,
+    nx,
+    bin_y,
+    bin_x,
+    nearest,
+    first_threshold,
+    matched_threshold,
+    coarse,
+    fine,
+    out,
 ):
     """Fill `out` with (row bin, column bin, density, samples, ratio) of the candidates; return how many."""
     ny = power.shape[0]
@@ -510,9 +525,7 @@ def waves_removed(
     block_maxima = spectrum.block_maxima.copy()
     scale = np.float32(1 / taper(footprint).power)
     arguments = spectrum.transform, spectrum.power, spectrum.block_maxima, scale, spectrum.shape[1], reach
-    _remove(
-        *arguments, frequency * shape, amplitude, middle / shape, window.rows, window.columns, window.plane, saved
-    )
+    _remove(*arguments, frequency * shape, amplitude, middle / shape, window.rows, window.columns, window.plane, saved)
     try:
         yield spectrum
     finally:

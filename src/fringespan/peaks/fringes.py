@@ -13,13 +13,17 @@ from fringespan.peaks.demodulation import demodulate
 from fringespan.peaks.detection import Candidates, density_at, detection_threshold, find_candidates, waves_removed
 from fringespan.peaks.joint_fit import JointFit, fit_jointly
 from fringespan.peaks.misfit import MISFIT_LIMIT, CellResiduals, cell_residuals, split_wave
+from fringespan.region import Footprint
 from fringespan.spectrum import PowerSpectrum, RegionPixels
 
 __all__ = ["Fringes", "find_fringes"]
 
+_PIECE_BINS = 5.0
+_PIECE_RATIO = 0.2
+"""A peak nearer than this to another, and weaker than this share of it, is a piece of it: the skirt of its envelope."""
+
 _STRONG = 4.0
 """A fringe this many times above the detection threshold is fitted before weaker ones are looked for."""
-
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -68,32 +72,31 @@ def find_fringes(
     """
     footprint = pixels.footprint
     threshold = detection_threshold(footprint.count, false_peaks_per_region)
-    search = partial(find_candidates, background=background, footprint=footprint)
-    # strong fringes first: their side lobes would hide weak ones, and pass for some
-    strong = _supported(
-        search(
-            spectrum, threshold=_STRONG * threshold, smallest_distance_bins=smallest_distance_bins
-        ),
-        threshold,
+    search = partial(
+        find_candidates, background=background, footprint=footprint, smallest_distance_bins=smallest_distance_bins
     )
-    start = demodulate(pixels, strong.frequency)
-    fit, kept = fit_jointly(pixels, start, strong.density, strong.limit)
+    # strong fringes first: their side lobes would hide weak ones, and pass for some
+    strong = _supported(search(spectrum, threshold=_STRONG * threshold), threshold)
+    fit, kept = fit_jointly(pixels, demodulate(pixels, strong.frequency), strong.density, strong.limit)
     density, limit = strong.density[kept], strong.limit[kept]
+    fit, density, limit = _without_pieces(pixels, fit, density, limit)
     with waves_removed(spectrum, footprint, fit.frequency, fit.amplitude) as rest:
-        if len(kept):
+        if len(density):
             density, samples = density_at(rest, background, fit.frequency)
             limit = _limit(threshold, samples)
-        weak = _supported(search(rest, threshold=threshold, smallest_distance_bins=smallest_distance_bins), threshold)
-    if len(weak.density):
-        start = fit.demodulation.joined(demodulate(pixels, weak.frequency))
-        density, limit = np.concatenate([density, weak.density]), np.concatenate([limit, weak.limit])
+        weak = _supported(search(rest, threshold=threshold), threshold)
+    apart = ~_near_stronger(footprint, weak.frequency, fit.frequency)
+    if apart.any():
+        start = fit.demodulation.joined(demodulate(pixels, weak.frequency[apart]))
+        density, limit = np.append(density, weak.density[apart]), np.append(limit, weak.limit[apart])
     else:
         start = fit.demodulation
     fit, kept = fit_jointly(pixels, start, density, limit)
-    density, limit = density[kept], limit[kept]
+    fit, density, limit = _without_pieces(pixels, fit, density[kept], limit[kept])
     residuals = cell_residuals(footprint, fit, density)
     if (residuals.misfit > MISFIT_LIMIT).any():
         fit, density, limit, residuals = _with_splits(pixels, fit, density, limit, residuals)
+        fit, density, limit, residuals = _merged(pixels, fit, density, limit, residuals)
     return Fringes(fit, density, limit, residuals)
 
 
@@ -115,6 +118,62 @@ def _supported(candidates: Candidates, threshold: float) -> _Supported:
 def _limit(threshold: float, samples: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return the power ratio to be reached: the noise is itself estimated from samples, so F law, not exponential."""
     return np.asarray(samples * np.expm1(threshold / samples))
+
+
+def _distances(
+    footprint: Footprint, frequency: NDArray[np.float64], others: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Return the distance in bins of each frequency from each other one or its opposite, shape (n, m)."""
+    bins = np.array(footprint.shape)
+    difference = np.hypot(*((frequency[:, None] - others[None]) * bins).transpose(2, 0, 1))
+    total = np.hypot(*((frequency[:, None] + others[None]) * bins).transpose(2, 0, 1))
+    return np.asarray(np.minimum(difference, total))
+
+
+def _near_stronger(
+    footprint: Footprint, frequency: NDArray[np.float64], stronger: NDArray[np.float64]
+) -> NDArray[np.bool_]:
+    """Say which frequencies lie so near to a stronger peak that they are its skirts."""
+    if not len(stronger) or not len(frequency):
+        return np.zeros(len(frequency), bool)
+    return np.asarray(_distances(footprint, frequency, stronger).min(axis=1) < _PIECE_BINS)
+
+
+def _without_pieces(
+    pixels: RegionPixels, fit: JointFit, density: NDArray[np.float64], limit: NDArray[np.float64]
+) -> tuple[JointFit, NDArray[np.float64], NDArray[np.float64]]:
+    """Leave out the pieces of broad peaks: near one that is much stronger, they are the skirts of its envelope."""
+    if len(density) < 2:
+        return fit, density, limit
+    distance = _distances(pixels.footprint, fit.frequency, fit.frequency)
+    weaker = fit.power_ratio[:, None] < _PIECE_RATIO * fit.power_ratio[None]
+    pieces = ((distance < _PIECE_BINS) & weaker).any(axis=1)
+    if not pieces.any():
+        return fit, density, limit
+    fit, kept = fit_jointly(pixels, fit.demodulation.part(~pieces), density[~pieces], limit[~pieces])
+    return fit, density[~pieces][kept], limit[~pieces][kept]
+
+
+def _merged(
+    pixels: RegionPixels,
+    fit: JointFit,
+    density: NDArray[np.float64],
+    limit: NDArray[np.float64],
+    residuals: CellResiduals,
+) -> tuple[JointFit, NDArray[np.float64], NDArray[np.float64], CellResiduals]:
+    """Keep the strongest of each group of near peaks that even together are no plane waves: one broken or bent fringe."""
+    distance = _distances(pixels.footprint, fit.frequency, fit.frequency)
+    stays = np.ones(len(density), bool)
+    for k in np.argsort(-fit.power_ratio):
+        if stays[k]:
+            near = (distance[k] < _PIECE_BINS) & (fit.power_ratio < fit.power_ratio[k])
+            if near.any() and (residuals.misfit[near].max() > MISFIT_LIMIT or residuals.misfit[k] > MISFIT_LIMIT):
+                stays &= ~near
+    if stays.all():
+        return fit, density, limit, residuals
+    fit, kept = fit_jointly(pixels, fit.demodulation.part(stays), density[stays], limit[stays])
+    density, limit = density[stays][kept], limit[stays][kept]
+    return fit, density, limit, cell_residuals(pixels.footprint, fit, density)
 
 
 def _with_splits(

@@ -123,8 +123,22 @@ def _subtract_outline(spans, edges_y, edges_x, cell_x, ny, nx, fy, fx, amplitude
 
 @numba.njit(cache=True, nogil=True)
 def _residuals(  # type: ignore[no-untyped-def]
-    blocks, size, spans, is_rectangle, ny, nx, edges_y, edges_x, polynomials,
-    demodulated, frequency, amplitude, density, count, residual, misfit
+    blocks,
+    size,
+    spans,
+    is_rectangle,
+    ny,
+    nx,
+    edges_y,
+    edges_x,
+    polynomials,
+    demodulated,
+    frequency,
+    amplitude,
+    density,
+    count,
+    residual,
+    misfit,
 ):
     n = frequency.shape[0]
     cells_y, cells_x = residual.shape[1], residual.shape[2]
@@ -235,9 +249,7 @@ def split_wave(
     shift_y, shift_x = (g.ravel() for g in np.meshgrid(grid, grid, indexing="ij"))
     spectrum = np.abs(np.exp(-2j * np.pi * (np.outer(shift_y, y) + np.outer(shift_x, x))) @ data)
     first = np.array([shift_y[spectrum.argmax()], shift_x[spectrum.argmax()]])
-    rest = np.abs(
-        np.exp(-2j * np.pi * (np.outer(shift_y, y) + np.outer(shift_x, x))) @ cells.residual[k].ravel()[used]
-    )
+    rest = np.abs(np.exp(-2j * np.pi * (np.outer(shift_y, y) + np.outer(shift_x, x))) @ cells.residual[k].ravel()[used])
     rest[np.hypot(shift_y, shift_x) < 0.4] = 0
     second = np.array([shift_y[rest.argmax()], shift_x[rest.argmax()]])
     along = (second - first) / max(np.hypot(*(second - first)), 1e-9)
@@ -252,8 +264,8 @@ def split_wave(
             best = result
     if best is None or np.hypot(*(best[1][0] - best[1][1])) < 1.0 or np.abs(best[1]).max() > 4:
         return None
-    # the sums of cells: noise density times their pixels each, less the eight fitted numbers
-    if best[0] / density / (counts.size - 4) > 1 + 6 / np.sqrt(counts.size):
+    # noise leaves its density times the pixels of each cell, less the eight fitted numbers; it is known to a third
+    if best[0] / density / (counts.size - 4) > 1.5 * (1 + 6 / np.sqrt(counts.size)):
         return None
     return best[1] * bins
 
