@@ -1,6 +1,6 @@
 """The record of a measurement: one JSON file that holds all that is needed to repeat and defend it."""
 
-from fringespan.record.document import SCHEMA, document_of, record_from, record_schema
+from fringespan.record.document import SCHEMA, document_of, plain_values, record_from, record_schema
 from fringespan.record.file import json_text, read_record, read_regions, write_record
 from fringespan.record.values import Identification, Match, Record, RecordedPicture, RecordedRegion, record_of
 
@@ -13,6 +13,7 @@ __all__ = [
     "RecordedRegion",
     "document_of",
     "json_text",
+    "plain_values",
     "read_record",
     "read_regions",
     "record_from",

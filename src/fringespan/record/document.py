@@ -22,7 +22,7 @@ from fringespan.region import Region
 from fringespan.settings import MeasurementSettings
 from fringespan.spacings import PairAngle, Peak
 
-__all__ = ["SCHEMA", "document_of", "record_from", "record_schema"]
+__all__ = ["SCHEMA", "document_of", "plain_values", "record_from", "record_schema"]
 
 SCHEMA = "fringespan.record/1"
 """Name and number of the form that this version writes and reads."""
@@ -83,19 +83,32 @@ def document_of(record: Record) -> Document:
         "magnification": record.magnification,
         "cautions": record.cautions,
     }
-    return cast("Document", _plain(document, "record"))
+    return cast("Document", plain_values(document, "record"))
 
 
-def _plain(value: object, place: str) -> object:
-    """Return a value made of dictionaries, lists, numbers and strings only."""
+def plain_values(value: object, place: str) -> object:
+    """Return a value made of dictionaries, lists, numbers and strings only, as JSON wants it.
+
+    Parameters
+    ----------
+    value : object
+        Dataclasses, mappings, arrays, lists, tuples, numbers, strings, None, inside each other.
+    place : str
+        What to call it where a number in it is not finite.
+
+    Raises
+    ------
+    RecordError
+        If a number is not finite.
+    """
     if dataclasses.is_dataclass(value):
-        return {f.name: _plain(getattr(value, f.name), f"{place}.{f.name}") for f in dataclasses.fields(value)}
+        return {f.name: plain_values(getattr(value, f.name), f"{place}.{f.name}") for f in dataclasses.fields(value)}
     if isinstance(value, Mapping):
-        return {str(key): _plain(item, f"{place}.{key}") for key, item in value.items()}
+        return {str(key): plain_values(item, f"{place}.{key}") for key, item in value.items()}
     if isinstance(value, np.ndarray | np.generic):
-        return _plain(value.tolist(), place)
+        return plain_values(value.tolist(), place)
     if isinstance(value, list | tuple):
-        return [_plain(item, f"{place}[{i}]") for i, item in enumerate(value)]
+        return [plain_values(item, f"{place}[{i}]") for i, item in enumerate(value)]
     if isinstance(value, float) and not math.isfinite(value):
         raise RecordError(f"{place} must be finite or null to be recorded, got {value!r}")
     return value

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields
 from importlib import metadata
 from typing import Any
 
@@ -14,6 +14,7 @@ from fringespan.cautions import Caution, gravest_first
 from fringespan.exceptions import RecordError
 from fringespan.lattice import PlaneLattice
 from fringespan.measurement import Measurement
+from fringespan.micrograph import Micrograph
 from fringespan.region import Region
 from fringespan.settings import MeasurementSettings
 from fringespan.spacings import PairAngle, Peak
@@ -51,6 +52,12 @@ class RecordedPicture:
     cs_mm: float | None = None
     defocus_nm: float | None = None
     dark_level: float | None = None
+
+    @classmethod
+    def of(cls, micrograph: Micrograph) -> RecordedPicture:
+        """Return what a record keeps of a picture; its checksum is computed now."""
+        kept = {f.name: getattr(micrograph, f.name) for f in fields(cls) if f.name != "sha256"}
+        return cls(sha256=micrograph.sha256(), **kept)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -202,21 +209,7 @@ def record_of(
         raise RecordError(f"identifications must be one a measurement ({len(measurements)}), got {len(found)}")
     return Record(
         program_version=metadata.version("fringespan"),
-        picture=RecordedPicture(
-            name=micrograph.name,
-            sha256=micrograph.sha256(),
-            shape=micrograph.shape,
-            frame=micrograph.frame,
-            frame_count=micrograph.frame_count,
-            pixel_size_nm=micrograph.pixel_size_nm,
-            pixel_size_relative_uncertainty=micrograph.pixel_size_relative_uncertainty,
-            pixel_size_source=micrograph.pixel_size_source,
-            shear=micrograph.shear,
-            voltage_kv=micrograph.voltage_kv,
-            cs_mm=micrograph.cs_mm,
-            defocus_nm=micrograph.defocus_nm,
-            dark_level=micrograph.dark_level,
-        ),
+        picture=RecordedPicture.of(micrograph),
         settings=settings,
         regions=tuple(
             _recorded_region(m, identification or Identification())
