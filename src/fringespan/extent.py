@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from fringespan.peaks.demodulation import Demodulation
 from fringespan.region import Footprint
 
-__all__ = ["FringeField", "crystal_mask", "filled_part", "fringe_fields", "outline"]
+__all__ = ["FringeField", "crystal_footprint", "crystal_mask", "filled_part", "fringe_fields", "outline"]
 
 _MOST_CELLS = 40
 _HALF = 0.5
@@ -230,3 +230,39 @@ def outline(fields: FringeField, mask: NDArray[np.bool_]) -> NDArray[np.float64]
     lines = contourpy.contour_generator(x, y, fine).lines(0.5)
     longest = max(lines, key=len)
     return np.asarray(longest[:-1, ::-1])
+
+
+def crystal_footprint(
+    footprint: Footprint, fields: FringeField, mask: NDArray[np.bool_]
+) -> tuple[Footprint, tuple[int, int]]:
+    """Return the footprint of the crystal alone and the place of its first pixel in that of the region.
+
+    Parameters
+    ----------
+    footprint : Footprint
+        Of the region.
+    fields : FringeField
+    mask : ndarray of bool, shape (cells down, cells across)
+        Cells that the crystal fills.
+    """
+    ny, nx = footprint.shape
+    step_y, step_x = fields.y[1] - fields.y[0], fields.x[1] - fields.x[0]
+    smooth = scipy.ndimage.gaussian_filter(mask.astype(float), 0.7, mode="nearest")
+    # cell positions are measured from the middle of the rectangle
+    row = (np.arange(ny) - (ny - 1) / 2 - fields.y[0]) / step_y
+    column = (np.arange(nx) - (nx - 1) / 2 - fields.x[0]) / step_x
+    row, column = np.clip(row, 0, len(fields.y) - 1), np.clip(column, 0, len(fields.x) - 1)
+    lines = _interpolated(smooth, row)
+    inside = _interpolated(lines.T, column).T > 0.5
+    if footprint.mask is not None:
+        inside &= footprint.mask
+    rows, columns = np.flatnonzero(inside.any(axis=1)), np.flatnonzero(inside.any(axis=0))
+    top, left = int(rows[0]), int(columns[0])
+    cut = np.ascontiguousarray(inside[top : rows[-1] + 1, left : columns[-1] + 1])
+    return Footprint.from_mask(cut), (top, left)
+
+
+def _interpolated(values: NDArray[np.float64], position: NDArray[np.float64]) -> NDArray[np.float64]:
+    low = np.minimum(position.astype(int), len(values) - 2)
+    share = (position - low)[:, None]
+    return np.asarray(values[low] * (1 - share) + values[low + 1] * share)

@@ -21,7 +21,15 @@ from numpy.typing import NDArray
 
 from fringespan.extent import FringeField, filled_part
 
-__all__ = ["CrystalFit", "fit_crystal", "smoothing_width_px"]
+__all__ = [
+    "CrystalFit",
+    "CrystalUncertainty",
+    "crystal_uncertainty",
+    "fit_crystal",
+    "lattice_tolerance",
+    "smoothing_width_px",
+    "why_broken",
+]
 
 _TAPER_REACH = 0.9
 
@@ -308,3 +316,106 @@ def _along(
     """Return the position along a direction from the weighted middle."""
     line = unit[0] * y + unit[1] * x
     return np.asarray(line - (weight * line).sum() / weight.sum())
+
+
+def why_broken(crystal: CrystalFit) -> list[str | None]:
+    """Say of each set of fringes why it gives no spacing, or None.
+
+    Typical where the contrast reverses across a particle: then the fringes jump by half a period somewhere.
+    """
+    reasons: list[str | None] = []
+    for phase, share, spread in zip(crystal.phase_rms, crystal.share, crystal.spread, strict=True):
+        if phase > _BROKEN_PHASE:
+            reasons.append(
+                f"the fringes shift by {phase / (2 * np.pi):.2f} of a period (RMS) across the crystal: their contrast "
+                "reverses or they bend"
+            )
+        elif share < _BROKEN_SHARE:
+            reasons.append(f"the fringes hold together over {100 * share:.0f} % of the region only")
+        elif spread > _BROKEN_SPREAD:
+            reasons.append(
+                f"parts of the crystal disagree by {spread:.2f} of a fringe over its width: the fringes are broken"
+            )
+        else:
+            reasons.append(None)
+    return reasons
+
+
+_BROKEN_PHASE, _BROKEN_SHARE, _BROKEN_SPREAD = 0.5, 0.15, 0.25
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class CrystalUncertainty:
+    """Standard uncertainties that one picture cannot show, in cycles over the crystal's extent.
+
+    Attributes
+    ----------
+    along, across : ndarray, shape (n,)
+        kappa of each peak along and across its g: the uncertainty of g is kappa / extent.
+    lattice : float
+        Of a length taken from the common lattice; 0 without one.
+    """
+
+    along: NDArray[np.float64]
+    across: NDArray[np.float64]
+    lattice: float
+
+
+def lattice_tolerance(phase_rms: NDArray[np.float64], plateau_loss: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the kappa that weights each peak in the fit of the common lattice."""
+    return np.sqrt(0.01**2 + (0.38 * phase_rms) ** 2 + (0.22 * plateau_loss) ** 2)
+
+
+def crystal_uncertainty(
+    crystal: CrystalFit,
+    noise_cycles: NDArray[np.float64],
+    lattice_residual_cycles: NDArray[np.float64] | None,
+    on_lattice: NDArray[np.bool_],
+    delocalisation_nm: NDArray[np.float64] | None,
+) -> CrystalUncertainty:
+    """Return the uncertainty that the thickness and the lens add, unseen in one picture.
+
+    Parameters
+    ----------
+    crystal : CrystalFit
+    noise_cycles : ndarray, shape (n,)
+        Standard uncertainty of g along itself by the noise, times the extent.
+    lattice_residual_cycles : ndarray, shape (n,), or None
+        Residual along g against the common lattice, times the extent; None without a lattice.
+    on_lattice : ndarray of bool, shape (n,)
+    delocalisation_nm : ndarray, shape (n,), or None
+        Signed delocalisation of each reflection where the lens is known.
+
+    Returns
+    -------
+    CrystalUncertainty
+
+    Notes
+    -----
+    Without a lattice kappa^2 = 0.003^2 + (phi / 2)^2 + (p / 4)^2. With one, kappa^2 = 0.002^2 + (1.5 kappa_lattice)^2 +
+    (0.15 p)^2 + (0.2 phi)^2, where kappa_lattice^2 is the scatter of the residuals less the noise's share.
+    """
+    phi, p = crystal.phase_rms, crystal.plateau_loss
+    alone = np.sqrt(0.003**2 + (0.5 * phi) ** 2 + (0.25 * p) ** 2)
+    across = np.where(crystal.one_sided, 1.0, 0.25) * alone
+    if lattice_residual_cycles is None:
+        return CrystalUncertainty(alone, across, 0.0)
+    scatter = lattice_scatter(
+        lattice_residual_cycles[on_lattice], noise_cycles[on_lattice], lattice_tolerance(phi, p)[on_lattice]
+    )
+    along = np.sqrt(0.002**2 + (1.5 * scatter) ** 2 + (0.15 * p) ** 2 + (0.2 * phi) ** 2)
+    if delocalisation_nm is not None:
+        along = along * np.sqrt(0.6**2 + (1.1 * np.minimum(np.abs(delocalisation_nm), 1.0)) ** 2)
+    lattice = float(np.sqrt((0.25 * np.median(p[on_lattice])) ** 2 + 0.0015**2))
+    return CrystalUncertainty(np.where(on_lattice, along, alone), across, lattice)
+
+
+def lattice_scatter(
+    residual_cycles: NDArray[np.float64], noise_cycles: NDArray[np.float64], tolerance: NDArray[np.float64]
+) -> float:
+    """Return kappa_lattice: how far peaks lie off their common lattice, in cycles over the extent, beyond the noise."""
+    count = len(residual_cycles)
+    weight = 1 / (tolerance**2 + noise_cycles**2)
+    squares = np.minimum(np.abs(residual_cycles), 0.3) ** 2
+    scatter = (weight * squares).sum() / weight.sum() * count / max(count - 2, 1)
+    return float(np.sqrt(max(scatter - (weight * noise_cycles**2).sum() / weight.sum(), 0.0)))

@@ -2,21 +2,22 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from fringespan.beam import Lens, scattering_angle_mrad, signed_delocalisation_nm
 from fringespan.cautions import Caution, gravest_first
+from fringespan.crystal_fringes import CrystalFringes, DelocalisationLaw, find_crystal_fringes
 from fringespan.exceptions import RegionError
-from fringespan.lattice import PlaneLattice
+from fringespan.lattice import PlaneLattice, combinations, plane_lattice
 from fringespan.micrograph import Micrograph
-from fringespan.noise import ring_background
-from fringespan.peaks.fringes import find_fringes
-from fringespan.region import Region, place_region
+from fringespan.region import PlacedRegion, Region, place_region
 from fringespan.settings import MeasurementSettings
-from fringespan.spacings import PairAngle, Peak, pair_angles, peaks_from_waves
-from fringespan.spectrum import PowerSpectrum, power_spectrum, prepare_pixels
+from fringespan.spacings import PairAngle, Peak, Scale, pair_angles, spacings_of
+from fringespan.spectrum import PowerSpectrum, RegionPixels, power_spectrum, prepare_pixels
 
 __all__ = ["Measurement", "measure"]
 
@@ -89,26 +90,100 @@ def measure(
     spectrum, pixels = power_spectrum(pixels)
     if pixels.sigma == 0:
         raise RegionError(f"region {region.name!r}: all its pixels are equal; draw it where the picture shows something")
-    size = micrograph.pixel_size_nm
-    background = ring_background(spectrum, 1.0 if size is None else round(size[1] / size[0], 3))
-    fringes = find_fringes(
-        pixels,
-        spectrum,
-        background,
-        false_peaks_per_region=settings.false_peaks_per_region,
-        smallest_distance_bins=settings.smallest_distance_bins,
+    found = find_crystal_fringes(
+        pixels, spectrum, settings, micrograph.pixel_size_nm or (1.0, 1.0), _delocalisation(micrograph)
     )
-    peaks = peaks_from_waves(micrograph, placed, fringes.fit)
-    cautions: list[Caution] = [*micrograph.cautions, *placed.cautions]
+    scale = Scale.of(micrograph)
+    peaks, angles = _peaks(micrograph, placed, pixels, found, scale)
+    lattice = None
+    if found.lattice is not None:
+        lattice = plane_lattice(found.lattice, found.lattice_relative, scale.geometry)
+    corner = np.array([placed.rows.start, placed.columns.start])
     return Measurement(
         micrograph=micrograph,
         region=region,
         settings=settings,
         peaks=peaks,
-        angles=pair_angles(micrograph, peaks),
-        lattice=None,
-        crystal_outline_px=None,
-        crystal_extent_nm=None,
+        angles=angles,
+        lattice=lattice,
+        crystal_outline_px=None if found.outline is None else found.outline + corner,
+        crystal_extent_nm=found.extent if scale.geometry is not None else None,
         spectrum=spectrum,
-        cautions=gravest_first(cautions),
+        cautions=gravest_first([*micrograph.cautions, *placed.cautions]),
     )
+
+
+def _delocalisation(micrograph: Micrograph) -> DelocalisationLaw | None:
+    """Return the signed delocalisation as a function of g, where the lens and the pixel size are known."""
+    values = micrograph.voltage_kv, micrograph.cs_mm, micrograph.defocus_nm
+    if None in values or micrograph.pixel_size_nm is None:
+        return None
+    lens = Lens(*values)  # type: ignore[arg-type]
+    return lambda g_per_nm: np.asarray(signed_delocalisation_nm(g_per_nm, lens))
+
+
+def _peaks(
+    micrograph: Micrograph, placed: PlacedRegion, pixels: RegionPixels, found: CrystalFringes, scale: Scale
+) -> tuple[tuple[Peak, ...], tuple[PairAngle, ...]]:
+    n = len(found.power_ratio)
+    if n == 0:
+        return (), ()
+    blocks = np.moveaxis(np.diagonal(found.covariance.reshape(n, 2, n, 2), axis1=0, axis2=2), -1, 0)
+    spacings = spacings_of(found.frequency, blocks, found.crystal_along, found.crystal_across, scale)
+    angles = pair_angles(spacings, found.covariance, scale, found.crystal_across)
+    in_nm = scale.geometry is not None
+    origin = placed.rows.start + found.phase_origin[0], placed.columns.start + found.phase_origin[1]
+    amplitude = np.abs(found.amplitude)
+    phase = np.where(spacings.flipped, -1, 1) * np.angle(found.amplitude)
+    mean = float(pixels.trend[0] + (pixels.trend[2] + pixels.trend[7]) / 3)
+    visible = micrograph.dark_level is not None and mean > micrograph.dark_level
+    theta = None
+    if in_nm and micrograph.voltage_kv is not None:
+        theta = scattering_angle_mrad(spacings.d, micrograph.voltage_kv).tolist()
+    total = np.sqrt(spacings.fit**2 + spacings.crystal**2 + spacings.scale**2)
+    stated = scale.uncertainty is not None
+    combined: list[tuple[int, ...] | None] = [None] * n
+    d_lattice, u_lattice, index = np.zeros(n), np.zeros(n), np.zeros((n, 2), int)
+    member = np.zeros(n, bool)
+    if found.lattice is not None:
+        member = found.lattice.member
+        index = np.where(spacings.flipped[:, None], -found.lattice.index, found.lattice.index)
+        combined = combinations(found.lattice.index, member, found.power_ratio)
+        exact = found.lattice.index @ found.lattice.basis
+        # peaks off the lattice have no place in it: any value does, since it is not used
+        exact = np.where(member[:, None], exact, found.frequency)
+        from_lattice = spacings_of(exact, blocks, found.lattice_along, found.lattice_along, scale)
+        d_lattice = from_lattice.d
+        u_lattice = np.sqrt(from_lattice.crystal**2 + np.nan_to_num(from_lattice.scale) ** 2)
+    peaks = []
+    for k in range(n):
+        gives_d = in_nm and found.withheld[k] is None
+        peaks.append(
+            Peak(
+                g_per_px=spacings.g_px[k],
+                g_covariance_per_px2=blocks[k],
+                g_per_nm=spacings.g[k] if in_nm else None,
+                g_covariance_per_nm2=spacings.covariance[k] if in_nm else None,
+                period_px=1 / math.hypot(*spacings.g_px[k].tolist()),
+                d_nm=float(spacings.d[k]) if gives_d else None,
+                d_fit_uncertainty_nm=float(spacings.fit[k]) if gives_d else None,
+                d_crystal_uncertainty_nm=float(spacings.crystal[k]) if gives_d else None,
+                d_uncertainty_nm=float(total[k]) if gives_d and stated else None,
+                d_lattice_nm=float(d_lattice[k]) if in_nm and member[k] else None,
+                d_lattice_uncertainty_nm=float(u_lattice[k]) if in_nm and member[k] and stated else None,
+                direction_deg=float(spacings.direction[k]),
+                direction_uncertainty_deg=float(spacings.direction_uncertainty[k]),
+                signal_to_noise=math.sqrt(found.power_ratio[k]),
+                visibility=2 * float(amplitude[k]) / (mean - float(micrograph.dark_level or 0)) if visible else None,
+                amplitude=2 * float(amplitude[k]),
+                phase_rad=float(phase[k]),
+                phase_origin_px=origin,
+                two_theta_mrad=theta[k] if theta is not None else None,
+                lattice_index=(int(index[k, 0]), int(index[k, 1])) if member[k] else None,
+                combination_of=combined[k],
+                origin="lattice point" if found.at_lattice_point[k] else "found",
+                withheld=found.withheld[k],
+                cautions=(),
+            )
+        )
+    return tuple(peaks), angles

@@ -14,7 +14,15 @@ from numpy.typing import NDArray
 from fringespan.cautions import Caution
 from fringespan.exceptions import RegionError
 
-__all__ = ["SMALLEST_WIDTH_PX", "Footprint", "PlacedRegion", "Region", "RegionKind", "place_region", "rectangle_footprint"]
+__all__ = [
+    "SMALLEST_WIDTH_PX",
+    "Footprint",
+    "PlacedRegion",
+    "Region",
+    "RegionKind",
+    "place_region",
+    "rectangle_footprint",
+]
 
 RegionKind = Literal["polygon", "rectangle", "ellipse", "whole picture"]
 

@@ -9,8 +9,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fringespan.cautions import Caution
+from fringespan.micrograph import Micrograph
 
-__all__ = ["PairAngle", "Peak", "PeakOrigin"]
+__all__ = ["PairAngle", "Peak", "PeakOrigin", "Scale", "Spacings", "pair_angles", "spacings_of"]
 
 PeakOrigin = Literal["found", "lattice point", "added by hand"]
 
@@ -104,28 +105,178 @@ class PairAngle:
     angle_uncertainty_deg: float
 
 
-def peaks_from_waves(micrograph, placed, fit):
-    inv = np.eye(2) if micrograph.geometry_nm_per_px is None else np.linalg.inv(micrograph.geometry_nm_per_px).T
-    out = []
-    order = np.argsort(-fit.power_ratio)
-    for k in order:
-        f = fit.frequency[k]
-        cov = fit.covariance[2 * k : 2 * k + 2, 2 * k : 2 * k + 2]
-        if f[1] < 0 or (f[1] == 0 and f[0] > 0):
-            f = -f
-        g = inv @ f
-        c = inv @ cov @ inv.T
-        norm = np.hypot(*g)
-        n = g / norm
-        t = np.array([-n[1], n[0]])
-        d = 1 / norm
-        fitu = d * d * np.sqrt(n @ c @ n)
-        out.append(Peak(g_per_px=f, g_covariance_per_px2=cov, g_per_nm=g, g_covariance_per_nm2=c, period_px=1 / np.hypot(*f), d_nm=d, d_fit_uncertainty_nm=fitu,
-            d_crystal_uncertainty_nm=0., d_uncertainty_nm=None, d_lattice_nm=None, d_lattice_uncertainty_nm=None, direction_deg=np.degrees(np.arctan2(-g[0], g[1])) % 180,
-            direction_uncertainty_deg=np.degrees(np.sqrt(t @ c @ t) / norm), signal_to_noise=np.sqrt(fit.power_ratio[k]), visibility=None, amplitude=2 * abs(fit.amplitude[k]),
-            phase_rad=0., phase_origin_px=(0., 0.), two_theta_mrad=None, lattice_index=None, combination_of=None, origin="found", withheld=None, cautions=()))
-    return tuple(out)
+@dataclass(frozen=True, eq=False, slots=True)
+class Scale:
+    """What turns cycles per pixel into 1/nm: the pixels' geometry and how well it is known.
+
+    Attributes
+    ----------
+    geometry : ndarray, shape (2, 2), or None
+        nm per pixel, as `Micrograph.geometry_nm_per_px`.
+    uncertainty : (float, float) or None
+        Relative standard uncertainty along (row, column); None if not stated.
+    common : bool
+        Whether both directions share one and the same error.
+    """
+
+    geometry: NDArray[np.float64] | None
+    uncertainty: tuple[float, float] | None
+    common: bool
+
+    @classmethod
+    def of(cls, micrograph: Micrograph) -> Scale:
+        """Return the scale of a picture."""
+        stated = micrograph.pixel_size_relative_uncertainty
+        if stated is None:
+            return cls(micrograph.geometry_nm_per_px, None, True)
+        if isinstance(stated, tuple):
+            return cls(micrograph.geometry_nm_per_px, stated, False)
+        return cls(micrograph.geometry_nm_per_px, (stated, stated), True)
 
 
-def pair_angles(micrograph, peaks):
-    return ()
+@dataclass(frozen=True, eq=False, slots=True)
+class Spacings:
+    """Spacings and directions of several reciprocal vectors, all arrays of n rows.
+
+    Lengths are in nm, or in pixels without a pixel size.
+
+    Attributes
+    ----------
+    g_px, g : ndarray, shape (n, 2)
+        In cycles per pixel and in the unit of the lengths, both of the half plane that is reported.
+    flipped : ndarray of bool
+        Whether the sign of the vector given was turned round.
+    covariance : ndarray, shape (n, 2, 2)
+        Fit part, in the unit of g.
+    d, fit, crystal, scale : ndarray
+        Spacing, and its standard uncertainty from the fit, from the crystal, and from the pixel size (nan if not stated).
+    direction, direction_uncertainty : ndarray
+        Degrees; fit, crystal and anisotropic pixel-size parts.
+    """
+
+    g_px: NDArray[np.float64]
+    g: NDArray[np.float64]
+    flipped: NDArray[np.bool_]
+    covariance: NDArray[np.float64]
+    d: NDArray[np.float64]
+    fit: NDArray[np.float64]
+    crystal: NDArray[np.float64]
+    scale: NDArray[np.float64]
+    direction: NDArray[np.float64]
+    direction_uncertainty: NDArray[np.float64]
+
+
+def spacings_of(
+    frequency: NDArray[np.float64],
+    covariance: NDArray[np.float64],
+    crystal_along: NDArray[np.float64],
+    crystal_across: NDArray[np.float64],
+    scale: Scale,
+) -> Spacings:
+    """Return spacings d = 1 / |g| and directions with their uncertainties.
+
+    Parameters
+    ----------
+    frequency : ndarray, shape (n, 2)
+        Cycles per pixel.
+    covariance : ndarray, shape (n, 2, 2)
+        Fit part, (cycles per pixel)^2.
+    crystal_along, crystal_across : ndarray, shape (n,)
+        Crystal part of g along and across itself, cycles per pixel.
+    scale : Scale
+
+    Returns
+    -------
+    Spacings
+
+    Notes
+    -----
+    g in 1/nm is M^-T g_px, M the geometry. With n = g / |g| and t across it, u(d) = d^2 sqrt(n C n), u(direction) =
+    sqrt(t C t) / |g|. A pixel size off by (e_row, e_column) changes d by n_row^2 e_row + n_col^2 e_col, relatively, and the
+    direction by n_row n_col (e_row - e_col).
+    """
+    flipped = (frequency[:, 1] < 0) | ((frequency[:, 1] == 0) & (frequency[:, 0] > 0))
+    g_px = np.where(flipped[:, None], -frequency, frequency)
+    transform = np.eye(2) if scale.geometry is None else np.linalg.inv(scale.geometry)
+    g = g_px @ transform
+    full = transform.T @ covariance @ transform
+    length = np.sqrt((g * g).sum(axis=1))
+    unit = g / length[:, None]
+    across = np.stack([-unit[:, 1], unit[:, 0]], axis=1)
+    # a crystal part along g in pixels, relative to |g|, stays the same relative part
+    relative = 1 / np.sqrt((g_px * g_px).sum(axis=1))
+    d = 1 / length
+    fit = d * d * np.sqrt(_form(unit, full))
+    turned = np.sqrt(_form(across, full)) / length
+    row, column = scale.uncertainty if scale.uncertainty is not None else (np.nan, np.nan)
+    weight_row, weight_column = unit[:, 0] ** 2, unit[:, 1] ** 2
+    if scale.common:
+        size_part, twist = d * row, np.zeros(len(d))
+    else:
+        size_part = d * np.hypot(weight_row * row, weight_column * column)
+        twist = np.abs(unit[:, 0] * unit[:, 1]) * np.hypot(row, column)
+    return Spacings(
+        g_px=g_px,
+        g=g,
+        flipped=flipped,
+        covariance=full,
+        d=d,
+        fit=fit,
+        crystal=d * crystal_along * relative,
+        scale=size_part,
+        direction=np.degrees(np.arctan2(-g[:, 0], g[:, 1])) % 180.0,
+        direction_uncertainty=np.degrees(np.sqrt(turned**2 + (crystal_across * relative) ** 2 + twist**2)),
+    )
+
+
+def _form(vector: NDArray[np.float64], matrix: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return v C v for each row, never below 0."""
+    y, x = vector[:, 0], vector[:, 1]
+    return np.asarray(
+        np.maximum(y * y * matrix[:, 0, 0] + 2 * y * x * matrix[:, 0, 1] + x * x * matrix[:, 1, 1], 0.0)
+    )
+
+
+def pair_angles(spacings: Spacings, joint_covariance: NDArray[np.float64], scale: Scale,
+                crystal_across: NDArray[np.float64]) -> tuple[PairAngle, ...]:
+    """Return the angle between every pair of vectors, with its standard uncertainty.
+
+    Parameters
+    ----------
+    spacings : Spacings
+    joint_covariance : ndarray, shape (2n, 2n)
+        Fit part of all vectors together, (cycles per pixel)^2, in the sign that the vectors had before they were turned.
+    scale : Scale
+    crystal_across : ndarray, shape (n,)
+        As in `spacings_of`.
+
+    Notes
+    -----
+    The direction of each vector moves by t C t / |g|^2; neighbouring peaks share part of their errors, which the joint
+    covariance holds. An isotropic error of the pixel size turns nothing, an anisotropic one turns both vectors by
+    n_row n_col (e_row - e_col) each, so that only the difference counts.
+    """
+    n = len(spacings.d)
+    if n < 2:
+        return ()
+    transform = np.eye(2) if scale.geometry is None else np.linalg.inv(scale.geometry)
+    g = spacings.g
+    length = np.sqrt((g * g).sum(axis=1))
+    unit = g / length[:, None]
+    # gradient of each direction, in rad, with respect to the vector in cycles per pixel
+    sign = np.where(spacings.flipped, -1.0, 1.0)
+    gradient = (np.stack([-unit[:, 1], unit[:, 0]], axis=1) @ transform.T) * (sign / length)[:, None]
+    blocks = joint_covariance.reshape(n, 2, n, 2)
+    turning = np.einsum("ia,iajb,jb->ij", gradient, blocks, gradient)
+    own = np.diag(turning)
+    relative = 1 / np.sqrt((spacings.g_px**2).sum(axis=1))
+    crystal = (crystal_across * relative) ** 2
+    variance = own[:, None] + own[None] - 2 * turning + crystal[:, None] + crystal[None]
+    if scale.uncertainty is not None and not scale.common:
+        twist = unit[:, 0] * unit[:, 1]
+        variance = variance + ((twist[:, None] - twist[None]) * np.hypot(*scale.uncertainty)) ** 2
+    cosine = np.clip(unit @ unit.T, -1.0, 1.0)
+    cross = np.abs(unit[:, :1] * unit[:, 1:].T - unit[:, 1:] * unit[:, :1].T)
+    angle = np.degrees(np.arctan2(cross, cosine)).tolist()
+    sigma = np.degrees(np.sqrt(np.maximum(variance, 0.0))).tolist()
+    return tuple(PairAngle((i, j), angle[i][j], sigma[i][j]) for i in range(n) for j in range(i + 1, n))

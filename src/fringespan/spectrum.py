@@ -324,7 +324,9 @@ def trend_surface(trend: NDArray[np.float64], shape: tuple[int, int]) -> NDArray
     x = ((np.arange(shape[1]) + 0.5) * 2 / shape[1] - 1)[None]
     t = trend
     return np.asarray(
-        t[0] + y * (t[4] + y * (t[7] + y * t[9])) + x * (t[1] + y * (t[5] + y * t[8]) + x * (t[2] + y * t[6] + x * t[3]))
+        t[0]
+        + y * (t[4] + y * (t[7] + y * t[9]))
+        + x * (t[1] + y * (t[5] + y * t[8]) + x * (t[2] + y * t[6] + x * t[3]))
     )
 
 

@@ -21,7 +21,7 @@ from fringespan.noise import RingBackground, kth_smallest, trimmed_mean
 from fringespan.region import Footprint
 from fringespan.spectrum import PowerSpectrum, taper
 
-__all__ = ["Candidates", "detection_threshold", "density_at", "find_candidates", "waves_removed"]
+__all__ = ["Candidates", "detection_threshold", "density_at", "find_candidates", "matched_ratio_at", "waves_removed"]
 
 _FIRST_PASS = 0.36
 """Share of the detection threshold that a bin alone must reach over the rings; a tapered bin between two sees a third."""
@@ -489,6 +489,42 @@ def density_at(
         frequency * spectrum.shape, out,
     )  # fmt: skip
     return out[0], out[1]
+
+
+def matched_ratio_at(
+    spectrum: PowerSpectrum, footprint: Footprint, frequency: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Return the matched-filter power at known frequencies; over the noise density it is the power ratio T.
+
+    Parameters
+    ----------
+    spectrum : PowerSpectrum
+    footprint : Footprint
+        Of the region that was transformed.
+    frequency : ndarray, shape (n, 2)
+        (row, column) in cycles per pixel.
+
+    Returns
+    -------
+    ndarray, shape (n,)
+    """
+    out = np.empty(len(frequency))
+    _filter_at(
+        spectrum.transform, spectrum.shape[1], frequency * spectrum.shape, _matched_filter(footprint).fine, out
+    )
+    return out
+
+
+@numba.njit(cache=True, nogil=True)
+def _filter_at(transform, nx, place, fine, out):  # type: ignore[no-untyped-def]
+    bins = np.zeros((2, 56), np.float32)
+    side = int(np.rint(np.sqrt(fine.shape[0])))
+    for k in range(place.shape[0]):
+        i, j = int(np.rint(place[k, 0])), int(np.rint(place[k, 1]))
+        _gather(transform, i, j, nx, bins)
+        ky = int(np.rint((place[k, 0] - i) * (side - 1))) + side // 2
+        kx = int(np.rint((place[k, 1] - j) * (side - 1))) + side // 2
+        out[k] = _filtered(fine, ky * side + kx, bins)
 
 
 @numba.njit(cache=True, nogil=True)

@@ -255,6 +255,8 @@ def split_wave(
     along = (second - first) / max(np.hypot(*(second - first)), 1e-9)
     best: tuple[float, NDArray[np.float64]] | None = None
     for start in (
+        # the single fit sits on one of the two as often as between them
+        [np.zeros(2), second],
         [first, second],
         [first + 0.5 * along, first - 0.5 * along],
         [first + 1.0 * along, first - 1.0 * along],

@@ -1,0 +1,513 @@
+"""The fringes of one crystal: plane waves, the extent they fill, the lattice they share, and how wrong they may be."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fringespan.extent import FringeField, crystal_footprint, crystal_mask, fringe_fields, outline
+from fringespan.finite_crystal import (
+    CrystalFit,
+    crystal_uncertainty,
+    fit_crystal,
+    lattice_scatter,
+    lattice_tolerance,
+    smoothing_width_px,
+    why_broken,
+)
+from fringespan.lattice import LatticeFit, find_lattice, lattice_points
+from fringespan.noise import ring_background
+from fringespan.peaks.demodulation import demodulate
+from fringespan.peaks.detection import density_at, matched_ratio_at, waves_removed
+from fringespan.peaks.fringes import Fringes, find_fringes
+from fringespan.peaks.joint_fit import fit_jointly
+from fringespan.peaks.misfit import MISFIT_LIMIT
+from fringespan.region import Footprint
+from fringespan.settings import MeasurementSettings
+from fringespan.spectrum import PowerSpectrum, RegionPixels, power_spectrum, prepare_pixels
+
+__all__ = ["CrystalFringes", "DelocalisationLaw", "find_crystal_fringes"]
+
+DelocalisationLaw = Callable[[NDArray[np.float64]], NDArray[np.float64]]
+"""Signed delocalisation in nm as a function of spatial frequency in 1/nm."""
+
+_CLEAR = 60.0
+"""Power ratio from which a misfit, or the extent of the fringes, can be believed."""
+
+_READABLE = 150.0
+"""Power ratio from which the fringes' own phase and plateau are read; weaker ones take those of the crystal."""
+
+_FILLED = 0.8
+"""A crystal that covers more of its region than this is measured in the whole region."""
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class CrystalFringes:
+    """Plane waves of one crystal. Lengths and frequencies are in pixels of the picture.
+
+    Attributes
+    ----------
+    frequency : ndarray, shape (n, 2)
+        (row, column) in cycles per pixel, strongest first.
+    covariance : ndarray, shape (2n, 2n)
+        Fit part.
+    power_ratio, density : ndarray, shape (n,)
+    amplitude : ndarray of complex128, shape (n,)
+        Half the real amplitude, with the phase at `phase_origin`.
+    phase_origin : (float, float)
+        (row, column) from the first pixel of the region's rectangle.
+    misfit : ndarray, shape (n,)
+        See `fringespan.peaks.misfit`.
+    crystal_along, crystal_across : ndarray, shape (n,)
+        Standard uncertainty of g along and across itself that one picture cannot show, cycles per pixel.
+    withheld : tuple of str or None
+        Why a set of fringes gives no spacing.
+    at_lattice_point : ndarray of bool, shape (n,)
+        Found only because the lattice told where to look.
+    lattice : LatticeFit or None
+        In cycles per pixel.
+    lattice_along : ndarray, shape (n,)
+        Standard uncertainty of the lattice's g along itself at each peak, fit and crystal parts, cycles per pixel.
+    lattice_relative : float
+        Crystal part of the relative uncertainty of the lattice's lengths.
+    outline : ndarray, shape (m, 2)
+        Where the fringes end: (row, column) from the first pixel of the region's rectangle.
+    extent : (float, float)
+        Greatest and smallest width of the outline, in nm where there is a pixel size, else in pixels.
+    uneven : bool
+        Whether the fringes fill the region unevenly.
+    share : float
+        Part of the region that the crystal covers.
+    others : ndarray, shape (k, 2)
+        Strong peaks of the region that are not the crystal's.
+    second_lattice : LatticeFit or None
+        A lattice that peaks off the first one share.
+    """
+
+    frequency: NDArray[np.float64]
+    covariance: NDArray[np.float64]
+    power_ratio: NDArray[np.float64]
+    density: NDArray[np.float64]
+    amplitude: NDArray[np.complex128]
+    phase_origin: tuple[float, float]
+    misfit: NDArray[np.float64]
+    crystal_along: NDArray[np.float64]
+    crystal_across: NDArray[np.float64]
+    withheld: tuple[str | None, ...]
+    at_lattice_point: NDArray[np.bool_]
+    lattice: LatticeFit | None
+    lattice_along: NDArray[np.float64]
+    lattice_relative: float
+    outline: NDArray[np.float64] | None
+    extent: tuple[float, float] | None
+    uneven: bool
+    share: float
+    others: NDArray[np.float64]
+    second_lattice: LatticeFit | None
+
+
+@dataclass(frozen=True, eq=False, slots=True)
+class _Scene:
+    """A region, or the part of it that a crystal fills, with what was found there."""
+
+    pixels: RegionPixels
+    spectrum: PowerSpectrum
+    fringes: Fringes
+    corner: tuple[int, int]
+    at_lattice_point: NDArray[np.bool_]
+
+    @property
+    def footprint(self) -> Footprint:
+        return self.pixels.footprint
+
+
+def find_crystal_fringes(
+    pixels: RegionPixels,
+    spectrum: PowerSpectrum,
+    settings: MeasurementSettings,
+    pixel_size: tuple[float, float],
+    delocalisation_nm: DelocalisationLaw | None,
+) -> CrystalFringes:
+    """Find the fringes of the largest crystal in a region.
+
+    Parameters
+    ----------
+    pixels : RegionPixels
+    spectrum : PowerSpectrum
+        Of these pixels.
+    settings : MeasurementSettings
+    pixel_size : (float, float)
+        Along (row, column); (1, 1) if not known.
+    delocalisation_nm : callable, or None
+        Signed delocalisation in nm at spatial frequencies in 1/nm, where the lens is known.
+
+    Returns
+    -------
+    CrystalFringes
+    """
+    aspect = round(pixel_size[1] / pixel_size[0], 3)
+    whole = _scene(pixels, spectrum, settings, aspect, (0, 0))
+    scene, others, share = whole, np.empty((0, 2)), 1.0
+    clear = whole.fringes.fit.power_ratio > _CLEAR
+    uneven = bool((clear & (whole.fringes.residuals.misfit > MISFIT_LIMIT)).any())
+    if uneven:
+        fields, mask = _crystal(whole, clear)
+        share = float(mask.sum() / fields.inside.sum())
+        if share < _FILLED:
+            footprint, corner = crystal_footprint(whole.footprint, fields, mask)
+            if min(footprint.shape) >= 24 and footprint.count > 400:
+                scene = _part(whole, footprint, corner, settings, aspect)
+                others = _missing(whole, scene)
+    size = np.array(pixel_size)
+    lattice = _lattice(scene, None, size)
+    if lattice is not None:
+        scene = _with_lattice_points(scene, lattice, settings, aspect)
+    return _assembled(scene, uneven, others, share, size, delocalisation_nm)
+
+
+def _scene(
+    pixels: RegionPixels,
+    spectrum: PowerSpectrum,
+    settings: MeasurementSettings,
+    aspect: float,
+    corner: tuple[int, int],
+) -> _Scene:
+    fringes = find_fringes(
+        pixels,
+        spectrum,
+        ring_background(spectrum, aspect),
+        false_peaks_per_region=settings.false_peaks_per_region,
+        smallest_distance_bins=settings.smallest_distance_bins,
+    )
+    return _Scene(pixels, spectrum, fringes, corner, np.zeros(len(fringes.density), bool))
+
+
+def _part(
+    whole: _Scene, footprint: Footprint, corner: tuple[int, int], settings: MeasurementSettings, aspect: float
+) -> _Scene:
+    """Find fringes again in the crystal alone: its own edge tapered, they have no side lobes, and less noise."""
+    top, left = corner
+    values = whole.pixels.values[top : top + footprint.shape[0], left : left + footprint.shape[1]]
+    spectrum, pixels = power_spectrum(prepare_pixels(values, footprint))
+    return _scene(pixels, spectrum, settings, aspect, corner)
+
+
+def _crystal(scene: _Scene, used: NDArray[np.bool_]) -> tuple[FringeField, NDArray[np.bool_]]:
+    """Return the fields of the strongest fringes and the cells that they fill together."""
+    fit = scene.fringes.fit
+    strongest = np.flatnonzero(used)[np.argsort(-fit.power_ratio[used])][:8]
+    width = smoothing_width_px(scene.footprint.count, fit.power_ratio, fit.frequency)[strongest]
+    fields = fringe_fields(
+        scene.footprint, fit.demodulation.part(strongest), fit.frequency[strongest], width
+    )
+    return fields, crystal_mask(fields, np.sqrt(fit.power_ratio[strongest]), 0.35)
+
+
+def _missing(whole: _Scene, part: _Scene) -> NDArray[np.float64]:
+    """Return the strong peaks of the region that the crystal's part does not have: another crystal's."""
+    before, after = whole.fringes, part.fringes
+    strong = before.fit.power_ratio > 3 * before.limit
+    bins = np.array(part.footprint.shape)
+    if not len(after.density):
+        return before.fit.frequency[strong]
+    difference = before.fit.frequency[:, None] - after.fit.frequency[None]
+    total = before.fit.frequency[:, None] + after.fit.frequency[None]
+    distance = np.minimum(np.hypot(*(difference * bins).T), np.hypot(*(total * bins).T)).T
+    # side lobes of the crystal's own peaks lie within some bins of them
+    return before.fit.frequency[strong & (distance.min(axis=1) > 6)]
+
+
+def _lattice(scene: _Scene, crystal: CrystalFit | None, size: NDArray[np.float64]) -> LatticeFit | None:
+    """Fit the common lattice, in cycles per pixel scaled by the pixel size."""
+    fit = scene.fringes.fit
+    n = len(fit.power_ratio)
+    if n < 3:
+        return None
+    g = fit.frequency / size
+    noise_along, noise_across = _along_across(g, fit.covariance, size)
+    if crystal is None:
+        extent = np.full(n, np.sqrt(scene.footprint.count * size.prod()))
+        even = scene.fringes.residuals.misfit <= MISFIT_LIMIT
+        tolerance = np.where(even, 0.02, 0.1)
+    else:
+        extent, tolerance = crystal.length, lattice_tolerance(crystal.phase_rms, crystal.plateau_loss)
+    sigma = np.hypot(noise_along, tolerance / extent)
+    return find_lattice(g, sigma, np.hypot(noise_across, 0.3 * tolerance / extent), np.sqrt(fit.power_ratio))
+
+
+def _along_across(
+    g: NDArray[np.float64], covariance: NDArray[np.float64], size: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return the standard uncertainties of each g along and across itself from the covariance in cycles per pixel."""
+    n = len(g)
+    unit = g / np.hypot(*g.T)[:, None]
+    blocks = np.array([covariance[2 * k : 2 * k + 2, 2 * k : 2 * k + 2] for k in range(n)]) / np.outer(size, size)
+    along = np.sqrt(np.einsum("ki,kij,kj->k", unit, blocks, unit))
+    turned = np.stack([unit[:, 1], -unit[:, 0]], axis=1)
+    return along, np.sqrt(np.einsum("ki,kij,kj->k", turned, blocks, turned))
+
+
+def _with_lattice_points(scene: _Scene, lattice: LatticeFit, settings: MeasurementSettings, aspect: float) -> _Scene:
+    """Look at the lattice points that show no peak yet, at the lower threshold that a known position allows."""
+    fringes, footprint = scene.fringes, scene.footprint
+    bins = np.array(footprint.shape)
+    members = fringes.fit.frequency[lattice.member]
+    # refit in cycles per pixel, plainly: the search needs it to a fraction of a bin only
+    basis = np.linalg.lstsq(lattice.index[lattice.member].astype(float), members, rcond=None)[0]
+    finest = 1.2 * np.hypot(*members.T).max()
+    point = lattice_points(basis, min(finest, 0.7)) @ basis
+    point = point[np.abs(point).max(axis=1) < 0.48]
+    taken = np.concatenate([fringes.fit.frequency, -fringes.fit.frequency])
+    apart = np.hypot(*((point[:, None] - taken[None]) * bins).transpose(2, 0, 1)).min(axis=1)
+    near = np.hypot(*(point * bins).T)
+    point = point[(apart > 4) & (near > settings.smallest_distance_bins)]
+    if not len(point) or len(point) > 2000:
+        return scene
+    threshold = float(np.log(len(point) / settings.false_peaks_per_region)) + 1.0
+    background = ring_background(scene.spectrum, aspect)
+    with waves_removed(scene.spectrum, footprint, fringes.fit.frequency, fringes.fit.amplitude) as rest:
+        density, samples = density_at(rest, background, point)
+        ratio = matched_ratio_at(rest, footprint, point) / density
+    limit = samples * np.expm1(threshold / samples)
+    hopeful = ratio > 0.8 * limit
+    if not hopeful.any():
+        return scene
+    start = fringes.fit.demodulation.joined(demodulate(scene.pixels, point[hopeful]))
+    all_density = np.append(fringes.density, density[hopeful])
+    all_limit = np.append(fringes.limit, limit[hopeful])
+    fit, kept = fit_jointly(scene.pixels, start, all_density, all_limit)
+    new = kept >= len(fringes.density)
+    # a weak peak that wandered off its lattice point is no lattice point
+    moved = np.zeros(len(kept))
+    moved[new] = np.hypot(*((fit.frequency[new] - point[hopeful][kept[new] - len(fringes.density)]) * bins).T)
+    stays = moved < 1.0
+    if not stays.all():
+        fit, kept_again = fit_jointly(scene.pixels, fit.demodulation.part(stays), all_density[kept[stays]], all_limit[kept[stays]])
+        kept, new = kept[stays][kept_again], new[stays][kept_again]
+    misfit = np.ones(len(kept))
+    misfit[~new] = fringes.residuals.misfit[kept[~new]]
+    residuals = replace(fringes.residuals, misfit=misfit)
+    return replace(
+        scene,
+        fringes=Fringes(fit, all_density[kept], all_limit[kept], residuals),
+        at_lattice_point=new,
+    )
+
+
+def _assembled(
+    scene: _Scene,
+    uneven: bool,
+    others: NDArray[np.float64],
+    share: float,
+    size: NDArray[np.float64],
+    delocalisation_nm: DelocalisationLaw | None,
+) -> CrystalFringes:
+    fit, misfit = scene.fringes.fit, scene.fringes.residuals.misfit
+    n = len(fit.power_ratio)
+    frequency, covariance = fit.frequency.copy(), fit.covariance.copy()
+    ny, nx = scene.footprint.shape
+    withheld: list[str | None] = [None] * n
+    crystal: CrystalFit | None = None
+    fields: FringeField | None = None
+    if n and uneven:
+        width = smoothing_width_px(scene.footprint.count, fit.power_ratio, fit.frequency)
+        fields = fringe_fields(scene.footprint, fit.demodulation, fit.frequency, width)
+        crystal = _crystal_fit(scene, fields, size)
+        own = (misfit > MISFIT_LIMIT) | (fit.power_ratio > _READABLE)
+        own &= (crystal.share < 0.95) | (crystal.phase_rms > 0.1) | (crystal.plateau_loss > 0.1)
+        frequency[own] += (crystal.shift * size)[own]
+        for k in np.flatnonzero(own):
+            covariance[2 * k : 2 * k + 2] *= crystal.efficiency[k]
+            covariance[:, 2 * k : 2 * k + 2] *= crystal.efficiency[k]
+        readable = fit.power_ratio > _READABLE
+        withheld = [reason if r else None for reason, r in zip(why_broken(crystal), readable, strict=True)]
+        crystal = _levelled(crystal, readable, fit.power_ratio)
+    moved = replace(scene, fringes=replace(scene.fringes, fit=replace(fit, frequency=frequency, covariance=covariance)))
+    sound = np.array([w is None for w in withheld], bool)
+    lattice = _lattice(moved, crystal, size)
+    along, across, lattice_along, lattice_relative = _uncertainties(
+        moved, crystal, lattice, sound, size, delocalisation_nm
+    )
+    order = np.argsort(-fit.power_ratio)
+    middle = scene.corner[0] + (ny - 1) / 2, scene.corner[1] + (nx - 1) / 2
+    drawn, extent = _outline(scene, fields, middle, size)
+    pairs = np.stack([2 * order, 2 * order + 1], axis=1).ravel()
+    second = _second_lattice(moved, lattice, size)
+    return CrystalFringes(
+        frequency=frequency[order],
+        covariance=covariance[np.ix_(pairs, pairs)],
+        power_ratio=fit.power_ratio[order],
+        density=scene.fringes.density[order],
+        amplitude=fit.amplitude[order],
+        phase_origin=middle,
+        misfit=misfit[order],
+        crystal_along=along[order],
+        crystal_across=across[order],
+        withheld=tuple(withheld[k] for k in order),
+        at_lattice_point=scene.at_lattice_point[order],
+        lattice=_reordered(lattice, order, size),
+        lattice_along=lattice_along[order],
+        lattice_relative=lattice_relative,
+        outline=drawn,
+        extent=extent,
+        uneven=uneven,
+        share=share,
+        others=others,
+        second_lattice=_reordered(second, order, size),
+    )
+
+
+def _crystal_fit(scene: _Scene, fields: FringeField, size: NDArray[np.float64]) -> CrystalFit:
+    """Fit each peak over its own extent, lengths in nm (or pixels without a pixel size)."""
+    fit = scene.fringes.fit
+    scaled = replace(fields, y=fields.y * size[0], x=fields.x * size[1], width_px=fields.width_px * np.sqrt(size.prod()))
+    return fit_crystal(scaled, fit.frequency / size, fit.power_ratio, scene.footprint.count * size.prod())
+
+
+def _levelled(crystal: CrystalFit, readable: NDArray[np.bool_], power_ratio: NDArray[np.float64]) -> CrystalFit:
+    """Give fringes too weak to read the extent, phase and plateau that the readable ones of the crystal have."""
+    if readable.all() or not readable.any():
+        return crystal
+    weight = np.sqrt(power_ratio[readable])
+
+    def common(values: NDArray[np.float64]) -> NDArray[np.float64]:
+        mean = float((weight * values[readable]).sum() / weight.sum())
+        return np.where(readable, values, np.maximum(mean, 0))
+
+    return replace(
+        crystal,
+        length=common(crystal.length),
+        width=common(crystal.width),
+        phase_rms=common(crystal.phase_rms),
+        plateau_loss=common(crystal.plateau_loss),
+    )
+
+
+def _uncertainties(
+    scene: _Scene,
+    crystal: CrystalFit | None,
+    lattice: LatticeFit | None,
+    sound: NDArray[np.bool_],
+    size: NDArray[np.float64],
+    delocalisation_nm: DelocalisationLaw | None,
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64], float]:
+    """Return the crystal part along and across g, and the lattice's uncertainty along g, in cycles per pixel."""
+    fit = scene.fringes.fit
+    n = len(fit.power_ratio)
+    if n == 0:
+        return np.zeros(0), np.zeros(0), np.zeros(0), 0.0
+    g = fit.frequency / size
+    noise, _ = _along_across(g, fit.covariance, size)
+    member = lattice.member & sound if lattice is not None else np.zeros(n, bool)
+    length = crystal.length if crystal is not None else _region_extent(scene.footprint, g, size)
+    residual = lattice.along * length if lattice is not None else None
+    if crystal is not None:
+        deloc = None if delocalisation_nm is None else np.asarray(delocalisation_nm(np.hypot(*g.T)))
+        enough = residual if member.sum() >= 3 else None
+        part = crystal_uncertainty(crystal, noise * length, enough, member, deloc)
+        along, across, floor = part.along, part.across, part.lattice
+    else:
+        # nothing departs from plane waves: what the lens may still do is bounded by what the noise lets see
+        scatter = 0.0
+        if residual is not None and member.sum() >= 3:
+            scatter = lattice_scatter(residual[member], (noise * length)[member], np.full(int(member.sum()), 0.002))
+        along = np.minimum(np.full(n, 1.5 * scatter), np.maximum(2 * noise * length, 1.5 * scatter))
+        across, floor = 0.25 * along, 0.0
+    # direction of g in pixels differs from that in nm by the pixel's aspect only, which these rough terms can ignore
+    scale = np.hypot(*(fit.frequency).T) / np.hypot(*g.T)
+    lattice_along, relative = np.zeros(n), 0.0
+    if lattice is not None:
+        unit = g / np.hypot(*g.T)[:, None]
+        jacobian = np.concatenate([lattice.index[:, :1] * unit, lattice.index[:, 1:] * unit], axis=1)
+        formal = np.sqrt(np.einsum("ki,ij,kj->k", jacobian, lattice.covariance, jacobian))
+        kappa = floor if crystal is not None else 0.0
+        lattice_along = np.hypot(0.9 * formal, kappa / length) * scale
+        relative = float(np.median(kappa / length / np.hypot(*g.T)))
+    return along / length * scale, across / length * scale, lattice_along, relative
+
+
+def _region_extent(footprint: Footprint, g: NDArray[np.float64], size: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return sqrt(12 var) of a footprint's pixels along each g, in nm (or pixels)."""
+    row, start, stop = (footprint.spans[:, i].astype(float) for i in range(3))
+    count = stop - start
+    middle = (start + stop - 1) / 2
+    total = count.sum()
+    y, x = (count * row).sum() / total, (count * middle).sum() / total
+    yy = (count * (row - y) ** 2).sum() / total
+    xx = (count * ((middle - x) ** 2 + (count**2 - 1) / 12)).sum() / total
+    yx = (count * (row - y) * (middle - x)).sum() / total
+    unit = g / np.hypot(*g.T)[:, None] * size
+    return np.sqrt(12 * (unit[:, 0] ** 2 * yy + unit[:, 1] ** 2 * xx + 2 * unit[:, 0] * unit[:, 1] * yx))
+
+
+def _reordered(lattice: LatticeFit | None, order: NDArray[np.intp], size: NDArray[np.float64]) -> LatticeFit | None:
+    """Return a lattice with its peaks in another order and its lengths in cycles per pixel."""
+    if lattice is None:
+        return None
+    scale = np.diag(np.tile(size, 2))
+    return replace(
+        lattice,
+        basis=lattice.basis * size,
+        covariance=scale @ lattice.covariance @ scale,
+        index=lattice.index[order],
+        member=lattice.member[order],
+        along=lattice.along[order],
+    )
+
+
+def _second_lattice(scene: _Scene, first: LatticeFit | None, size: NDArray[np.float64]) -> LatticeFit | None:
+    """Return a lattice that at least three strong peaks off the first one share."""
+    if first is None:
+        return None
+    fringes = scene.fringes
+    off = ~first.member & (fringes.fit.power_ratio > 2 * fringes.limit)
+    if off.sum() < 3:
+        return None
+    pairs = np.stack([2 * np.flatnonzero(off), 2 * np.flatnonzero(off) + 1], axis=1).ravel()
+    fit = replace(
+        fringes.fit,
+        frequency=fringes.fit.frequency[off],
+        covariance=fringes.fit.covariance[np.ix_(pairs, pairs)],
+        power_ratio=fringes.fit.power_ratio[off],
+    )
+    residuals = replace(fringes.residuals, misfit=fringes.residuals.misfit[off])
+    lattice = _lattice(replace(scene, fringes=replace(fringes, fit=fit, residuals=residuals)), None, size)
+    if lattice is None:
+        return None
+    index, member, along = np.zeros((len(off), 2), np.int64), np.zeros(len(off), bool), np.zeros(len(off))
+    index[off], member[off], along[off] = lattice.index, lattice.member, lattice.along
+    return replace(lattice, index=index, member=member, along=along)
+
+
+def _outline(
+    scene: _Scene, fields: FringeField | None, middle: tuple[float, float], size: NDArray[np.float64]
+) -> tuple[NDArray[np.float64] | None, tuple[float, float] | None]:
+    """Return the crystal's outline from the region's first pixel, and its greatest and smallest width."""
+    power_ratio = scene.fringes.fit.power_ratio
+    if not len(power_ratio):
+        return None, None
+    if fields is None:
+        corners = _corners(scene.footprint) + scene.corner
+    else:
+        used = power_ratio > min(_CLEAR, power_ratio.max() * 0.99)
+        part = replace(fields, field=fields.field[used], width_px=fields.width_px[used])
+        corners = outline(part, crystal_mask(part, np.sqrt(power_ratio[used]))) + middle
+    angle = np.linspace(0, np.pi, 36, endpoint=False)
+    widths = np.ptp((corners * size) @ np.stack([np.sin(angle), np.cos(angle)]), axis=0)
+    return corners, (float(widths.max()), float(widths.min()))
+
+
+def _corners(footprint: Footprint) -> NDArray[np.float64]:
+    """Return corners of a footprint: its four for a rectangle, else the ends of its rows."""
+    ny, nx = footprint.shape
+    if footprint.mask is None:
+        return np.array([(-0.5, -0.5), (-0.5, nx - 0.5), (ny - 0.5, nx - 0.5), (ny - 0.5, -0.5)])
+    rows, first = np.unique(footprint.spans[:, 0], return_index=True)
+    last = np.append(first[1:], len(footprint.spans)) - 1
+    left, right = footprint.spans[first, 1], footprint.spans[last, 2] - 1
+    step = max(1, len(rows) // 60)
+    down, up = np.stack([rows, right], axis=1)[::step], np.stack([rows, left], axis=1)[::step][::-1]
+    return np.concatenate([down, up]).astype(float)
