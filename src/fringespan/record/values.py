@@ -220,6 +220,7 @@ def record_of(
 
 
 def _recorded_region(measurement: Measurement, identification: Identification) -> RecordedRegion:
+    cautions = (*measurement.cautions, *identification.cautions)
     return RecordedRegion(
         region=measurement.region,
         crystal_outline_px=measurement.crystal_outline_px,
@@ -228,5 +229,6 @@ def _recorded_region(measurement: Measurement, identification: Identification) -
         angles=measurement.angles,
         lattice=measurement.lattice,
         identification=identification,
-        cautions=gravest_first((*measurement.cautions, *identification.cautions)),
+        # what holds for the whole picture stands there, once
+        cautions=gravest_first(c for c in cautions if c not in measurement.micrograph.cautions),
     )
