@@ -1,0 +1,114 @@
+#!/usr/bin/env python3
+"""Run the tests: make an environment of their own, install fringespan into it, call pytest.
+
+    python3 tests/run.py                            the quick tests
+    python3 tests/run.py --slow                     also those that take minutes
+    python3 tests/run.py --install-system-packages  install what the system lacks first (Debian and its relatives)
+    python3 tests/run.py -- -k profile -x           anything after -- goes to pytest
+
+Any Python from 3.11 on can run this file, also one that refuses to install packages outside a virtual environment: it
+needs only the standard library. The environment is `.venv-test` beside the `tests` folder; delete it to begin afresh.
+The exit status is pytest's.
+"""
+
+from __future__ import annotations
+
+import argparse
+import hashlib
+import os
+import shutil
+import subprocess
+import sys
+import venv
+from pathlib import Path
+
+OLDEST_PYTHON = (3, 11)
+CHECKOUT = Path(__file__).resolve().parent.parent
+ENVIRONMENT = CHECKOUT / ".venv-test"
+STAMP = ENVIRONMENT / "installed-for"
+
+# what the tests need of the system, and how to see whether it is there; on other systems than Debian only the question
+# is used, and its answer told
+SYSTEM_PACKAGES = {
+    f"python{sys.version_info.major}.{sys.version_info.minor}-venv": lambda: _has_module("ensurepip"),
+}
+
+
+def main() -> int:
+    """Do what the head of this file says."""
+    if sys.version_info < OLDEST_PYTHON:
+        found = ".".join(map(str, sys.version_info[:2]))
+        return _stop(f"Python {'.'.join(map(str, OLDEST_PYTHON))} or newer is needed, this is {found}")
+    options, for_pytest = _arguments()
+    missing = [package for package, is_there in SYSTEM_PACKAGES.items() if not is_there()]
+    if missing:
+        command = _install_command(missing)
+        if command is None:
+            return _stop(f"the system lacks {', '.join(missing)}; install it the way your system does")
+        if not options.install_system_packages:
+            return _stop(
+                f"the system lacks {', '.join(missing)}. Install it with\n    {' '.join(command)}\n"
+                "or let this do it: add --install-system-packages"
+            )
+        for step in (["update"], command[command.index("install") :]):
+            done = subprocess.run([*command[: command.index("install")], *step], env=_quiet_debian(), check=False)
+            if done.returncode:
+                return _stop(f"apt-get {step[0]} failed with status {done.returncode}")
+    try:
+        python = _environment()
+    except subprocess.CalledProcessError as failure:
+        return _stop(f"the environment could not be made: {' '.join(map(str, failure.cmd))} failed")
+    # the names of the markers are those of pyproject.toml
+    selected = [] if options.slow else ["-m", "not slow"]
+    return subprocess.run([python, "-m", "pytest", *selected, *for_pytest], cwd=CHECKOUT, check=False).returncode
+
+
+def _arguments() -> tuple[argparse.Namespace, list[str]]:
+    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser.add_argument("--slow", action="store_true", help="run the slow tests too")
+    parser.add_argument(
+        "--install-system-packages", action="store_true", help="install missing Debian packages (needs root or sudo)"
+    )
+    options, rest = parser.parse_known_args()
+    return options, [argument for i, argument in enumerate(rest) if argument != "--" or "--" in rest[:i]]
+
+
+def _environment() -> Path:
+    """Make the environment, or bring it up to date, and return its Python."""
+    python = ENVIRONMENT / ("Scripts/python.exe" if os.name == "nt" else "bin/python")
+    # the code itself is used in place; only these decide what must be installed
+    wanted = hashlib.sha256((CHECKOUT / "pyproject.toml").read_bytes() + sys.version.encode()).hexdigest()
+    if python.exists() and STAMP.exists() and STAMP.read_text() == wanted:
+        return python
+    print(f"Making {ENVIRONMENT} (once; takes a minute or two) ...", file=sys.stderr, flush=True)
+    # the Python that made an environment may be another one, or gone
+    venv.EnvBuilder(with_pip=True, clear=True).create(ENVIRONMENT)
+    install = [python, "-m", "pip", "install", "--quiet", "--disable-pip-version-check", "--editable", ".[test]"]
+    subprocess.run(install, cwd=CHECKOUT, check=True)
+    STAMP.write_text(wanted)
+    return python
+
+
+def _has_module(name: str) -> bool:
+    # asked of a Python of its own: this one may have been changed by its surroundings
+    return subprocess.run([sys.executable, "-c", f"import {name}"], capture_output=True, check=False).returncode == 0
+
+
+def _install_command(packages: list[str]) -> list[str] | None:
+    if shutil.which("apt-get") is None:
+        return None
+    is_root = hasattr(os, "geteuid") and os.geteuid() == 0
+    return [*([] if is_root else ["sudo"]), "apt-get", "install", "--yes", *packages]
+
+
+def _quiet_debian() -> dict[str, str]:
+    return os.environ | {"DEBIAN_FRONTEND": "noninteractive"}
+
+
+def _stop(reason: str) -> int:
+    print(f"tests/run.py: {reason}", file=sys.stderr)
+    return 2
+
+
+if __name__ == "__main__":
+    sys.exit(main())
