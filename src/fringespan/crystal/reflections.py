@@ -228,7 +228,12 @@ def expected_reflections(
     >>> [(r.hkl, round(r.d_nm, 4)) for r in expected_reflections(load_phase("gold"), 0.2) if not r.forbidden]
     [((1, 1, 1), 0.2355), ((2, 0, 0), 0.2039)]
     """
-    arrays = reflection_arrays(phase, checked_d_min(d_min_nm))
+    return _families(phase, checked_d_min(d_min_nm), voltage_kv)
+
+
+@lru_cache(maxsize=512)
+def _families(phase: Phase, d_min_nm: float, voltage_kv: float | None) -> tuple[Reflection, ...]:
+    arrays = reflection_arrays(phase, d_min_nm)
     if voltage_kv is None:
         angles: list[float | None] = [None] * len(arrays.hkl)
     else:
