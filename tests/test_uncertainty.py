@@ -1,14 +1,16 @@
 """Values are written with their standard uncertainty in parentheses."""
 
+import math
 import re
 from decimal import Decimal
 
+import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
 from fringespan.exceptions import SettingsError
-from fringespan.uncertainty import value_text
+from fringespan.uncertainty import relative_length_uncertainty, value_text
 
 WRITTEN = [
     # CODATA 2018 as printed by NIST: m_p/m_e = 1836.152 673 43(11), vacuum permittivity 8.854 187 8128(13)e-12 F/m,
@@ -63,3 +65,23 @@ def test_nonsense_is_refused(value, uncertainty):
 
 def test_the_number_of_digits_without_uncertainty_can_be_chosen():
     assert value_text(1.96875, None, digits=3) == "1.97"
+
+
+@pytest.mark.parametrize(
+    ("uncertainty", "y", "x", "relative"),
+    [
+        (0.01, 3.0, 4.0, 0.01),
+        ((0.01, 0.02), 1.0, 0.0, 0.01),
+        ((0.01, 0.02), 0.0, -2.5, 0.02),
+        ((0.01, 0.01), 1.0, 1.0, 0.01 / math.sqrt(2)),
+    ],
+)
+def test_a_length_takes_its_uncertainty_from_the_pixel_size_along_it(uncertainty, y, x, relative):
+    assert relative_length_uncertainty(uncertainty, y, x) == pytest.approx(relative)
+
+
+def test_independent_errors_of_rows_and_columns_agree_with_a_simulation():
+    rng = np.random.default_rng(0)
+    rows, columns = 1 + rng.normal(0, [[0.01], [0.02]], (2, 200_000))
+    lengths = np.hypot(3 * rows, 4 * columns)
+    assert lengths.std() / 5 == pytest.approx(relative_length_uncertainty((0.01, 0.02), 3, 4), rel=0.01)

@@ -1,4 +1,4 @@
-"""How a value is written together with its standard uncertainty: 0.2355(4)."""
+"""How a value is written with its standard uncertainty, 0.2355(4), and what the pixel size adds to that."""
 
 from __future__ import annotations
 
@@ -6,7 +6,7 @@ import math
 
 from fringespan.exceptions import SettingsError
 
-__all__ = ["NOT_GIVEN", "value_text"]
+__all__ = ["NOT_GIVEN", "relative_length_uncertainty", "value_text"]
 
 NOT_GIVEN = "-"
 """What stands in a table where there is no value."""
@@ -65,3 +65,26 @@ def value_text(value: float | None, standard_uncertainty: float | None, *, digit
     low, high = _PLAIN_RANGE
     plain = low <= max(abs(value), standard_uncertainty) < high
     return f"{ufloat(value, standard_uncertainty):.{2 if begins_with_one else 1}u{'f' if plain else ''}S}"
+
+
+def relative_length_uncertainty(
+    pixel_size_relative_uncertainty: float | tuple[float, float], y: float, x: float
+) -> float:
+    """Return the relative standard uncertainty of a length in the picture by that of the pixel size.
+
+    Parameters
+    ----------
+    pixel_size_relative_uncertainty : float or (float, float)
+        A fraction: shared by rows and columns, or independent ones of (row, column).
+    y, x : float
+        Direction of the length in the specimen; need not be of unit length.
+
+    Returns
+    -------
+    float
+        Of L = hypot(y, x): dL/L = (y^2 dy/y + x^2 dx/x) / L^2.
+    """
+    if isinstance(pixel_size_relative_uncertainty, tuple):
+        row, column = pixel_size_relative_uncertainty
+        return math.hypot(y**2 * row, x**2 * column) / (y**2 + x**2)
+    return pixel_size_relative_uncertainty

@@ -7,12 +7,13 @@ from collections.abc import Iterable, Sequence
 from typing import Literal
 
 import numpy as np
+from numpy.typing import NDArray
 
 from fringespan.cautions import Caution, gravest_first
 from fringespan.export.plain_text import Column, Line, aligned_table, enumeration, one_line, paragraph, shortened
 from fringespan.record import Match, Record, RecordedPicture, RecordedRegion
 from fringespan.spacings import Peak
-from fringespan.uncertainty import NOT_GIVEN, value_text
+from fringespan.uncertainty import NOT_GIVEN, relative_length_uncertainty, value_text
 
 __all__ = ["caution_lines", "measurement_lines", "picture_heading", "spacing_text"]
 
@@ -76,7 +77,7 @@ def _relative_uncertainty(picture: RecordedPicture) -> str:
 
 def _region_lines(picture: RecordedPicture, region: RecordedRegion, width: int) -> list[Line]:
     name = shortened(region.region.name, max(20, width // 2))
-    lines = [Line(name, "heading"), *paragraph(_region_facts(region), width, first="  ")]
+    lines = [Line(name, "heading"), *paragraph(_region_facts(picture, region), width, first="  ")]
     if region.peaks:
         lines += _peak_lines(picture, region, width)
         lines += _angle_lines(region, width)
@@ -88,7 +89,7 @@ def _region_lines(picture: RecordedPicture, region: RecordedRegion, width: int) 
     return lines
 
 
-def _region_facts(region: RecordedRegion) -> str:
+def _region_facts(picture: RecordedPicture, region: RecordedRegion) -> str:
     if not region.peaks:
         return "no fringe found"
     facts = []
@@ -105,13 +106,24 @@ def _region_facts(region: RecordedRegion) -> str:
         text = f"{members} on one lattice"
         if lattice.lengths_nm is not None and lattice.length_uncertainties_nm is not None:
             sides = [
-                value_text(length, uncertainty)
-                for length, uncertainty in zip(lattice.lengths_nm, lattice.length_uncertainties_nm, strict=True)
+                value_text(length, math.hypot(uncertainty, length * _relative_pixel_part(picture, vector)))
+                for length, uncertainty, vector in zip(
+                    lattice.lengths_nm, lattice.length_uncertainties_nm, lattice.real_px, strict=True
+                )
             ]
             angle = value_text(lattice.angle_deg, lattice.angle_uncertainty_deg)
             text += f" of {sides[0]} x {sides[1]} nm, {angle} deg"
         facts.append(text)
     return ", ".join(facts)
+
+
+def _relative_pixel_part(picture: RecordedPicture, vector_px: NDArray[np.float64]) -> float:
+    """Return the relative standard uncertainty of a length in this direction by the pixel size's; 0 if not stated."""
+    uncertainty, size = picture.pixel_size_relative_uncertainty, picture.pixel_size_nm
+    if uncertainty is None or size is None:
+        return 0.0
+    y, x = vector_px[0] * size[0], (vector_px[1] + picture.shear * vector_px[0]) * size[1]
+    return relative_length_uncertainty(uncertainty, float(y), float(x))
 
 
 def _peak_lines(picture: RecordedPicture, region: RecordedRegion, width: int) -> list[Line]:
@@ -123,14 +135,17 @@ def _peak_lines(picture: RecordedPicture, region: RecordedRegion, width: int) ->
         columns += _spacing_columns(peaks)
     directions = [value_text(p.direction_deg, p.direction_uncertainty_deg) for p in peaks]
     columns.append(Column("direction", "deg", directions, rank=1))
-    columns.append(Column("S/N", "", [f"{p.signal_to_noise:.0f}" for p in peaks], rank=4))
+    columns.append(Column("S/N", "", [f"{p.signal_to_noise:.0f}" for p in peaks], rank=5))
     if any(p.lattice_index is not None for p in peaks):
-        indices = ["off" if p.lattice_index is None else "{} {}".format(*p.lattice_index) for p in peaks]
+        indices = ["off" if p.lattice_index is None else "{:2d} {:2d}".format(*p.lattice_index) for p in peaks]
         columns.append(Column("lattice", "", indices, "left", rank=2))
+    if any(p.combination_of is not None for p in peaks):
+        combined = [", ".join(str(i + 1) for i in p.combination_of or ()) for p in peaks]
+        columns.append(Column("combines", "", combined, "left", rank=4))
     if any(p.visibility is not None for p in peaks):
         visibilities = [NOT_GIVEN if p.visibility is None else f"{p.visibility:.2f}" for p in peaks]
-        columns.append(Column("visibility", "", visibilities, rank=5))
-    lines, left_out = aligned_table(columns, width, indent="  ")
+        columns.append(Column("visibility", "", visibilities, rank=6))
+    lines, left_out = aligned_table(columns, width, indent=" ")
     if picture.pixel_size_nm is not None and any(p.d_nm is not None and p.d_uncertainty_nm is None for p in peaks):
         lines += paragraph(
             "The uncertainty of d leaves out that of the pixel size, which is not stated: give "
@@ -156,6 +171,9 @@ def _spacing_columns(peaks: Sequence[Peak]) -> list[Column]:
         "crystal": [_share(p.d_crystal_uncertainty_nm, p) for p in peaks],
         "pixel": [_share(_pixel_size_part(p), p) for p in peaks],
     }
+    # an error of the pixel size that all spacings share stands above, in the line of the picture
+    if len(set(parts["pixel"]) - {NOT_GIVEN}) == 1:
+        del parts["pixel"]
     columns += [
         Column(name, "%", cells, rank=3) for name, cells in parts.items() if any(cell != NOT_GIVEN for cell in cells)
     ]
@@ -207,20 +225,12 @@ def _remark_lines(peaks: Sequence[Peak], width: int) -> list[Line]:
     for number, peak in enumerate(peaks, start=1):
         if peak.withheld is not None:
             remarks.setdefault(f"no d: {one_line(peak.withheld)}", []).append(str(number))
-        if peak.combination_of is not None:
-            remarks.setdefault(_combination_words(peak.combination_of), []).append(str(number))
         if peak.origin != "found":
             remarks.setdefault(peak.origin, []).append(str(number))
     lines: list[Line] = []
     for remark, numbers in remarks.items():
         lines += paragraph(f"{remark}.", width, first=f"  {', '.join(numbers)}: ")
     return lines
-
-
-def _combination_words(positions: Sequence[int]) -> str:
-    if len(set(positions)) == 1:
-        return f"harmonic of {positions[0] + 1}"
-    return "combination of " + " and ".join(str(i + 1) for i in positions)
 
 
 def _angle_lines(region: RecordedRegion, width: int) -> list[Line]:

@@ -19,6 +19,7 @@ from fringespan.micrograph import Micrograph
 from fringespan.profile.strip import Strip
 from fringespan.profile.tilt import Tilt, fringes_in_single_lines, tilt_of
 from fringespan.profile.waves import Fit, fitted_fringes
+from fringespan.uncertainty import relative_length_uncertainty
 
 __all__ = ["FringeProfile", "measure_profile"]
 
@@ -179,7 +180,8 @@ def _in_nm(
     y, x = strip.geometry @ strip.along
     nm_per_px = math.hypot(y, x)
     spacing, fit_part = period * nm_per_px, uncertainty * nm_per_px
-    relative = _relative_pixel_part(micrograph, y / nm_per_px, x / nm_per_px)
+    stated = micrograph.pixel_size_relative_uncertainty
+    relative = None if stated is None else relative_length_uncertainty(stated, float(y), float(x))
     values = {
         "spacing_nm": spacing,
         "spacing_fit_uncertainty_nm": fit_part,
@@ -198,16 +200,6 @@ def _in_nm(
             "d_uncertainty_nm": None if relative is None else math.hypot(d_fit, relative * d),
         }
     return values
-
-
-def _relative_pixel_part(micrograph: Micrograph, y: float, x: float) -> float | None:
-    """Return the relative standard uncertainty of a length along the unit vector (y, x) by that of the pixel size."""
-    uncertainty = micrograph.pixel_size_relative_uncertainty
-    if uncertainty is None:
-        return None
-    if isinstance(uncertainty, float):
-        return uncertainty
-    return math.hypot(y**2 * uncertainty[0], x**2 * uncertainty[1])
 
 
 _NO_FRINGE = Caution(
