@@ -61,10 +61,13 @@ def value_text(value: float | None, standard_uncertainty: float | None, *, digit
         return f"{value:.{digits}g}(0)"
     from uncertainties import ufloat
 
-    begins_with_one = f"{standard_uncertainty:.1e}".startswith("1")
+    # 0.00096 is written as 0.0010, with the two digits of an uncertainty that begins with a 1
+    rounded = float(f"{standard_uncertainty:.0e}")
+    shown = rounded if f"{rounded:.0e}".startswith("1") and rounded > standard_uncertainty else standard_uncertainty
+    begins_with_one = f"{shown:.1e}".startswith("1")
     low, high = _PLAIN_RANGE
     plain = low <= max(abs(value), standard_uncertainty) < high
-    return f"{ufloat(value, standard_uncertainty):.{2 if begins_with_one else 1}u{'f' if plain else ''}S}"
+    return f"{ufloat(value, shown):.{2 if begins_with_one else 1}u{'f' if plain else ''}S}"
 
 
 def relative_length_uncertainty(

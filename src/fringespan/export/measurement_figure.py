@@ -132,7 +132,7 @@ def _draw_regions(axes: Axes, measurements: Sequence[Measurement]) -> None:
         axes.add_patch(_outline(outline, _colour(number), linewidth=1.2))
         if measurement.crystal_outline_px is not None:
             crystal = measurement.crystal_outline_px[:, ::-1]
-            axes.add_patch(_outline(crystal, _colour(number), linewidth=1.0, linestyle=_DASHES))
+            axes.add_patch(_outline(crystal, "white", linewidth=1.0, linestyle=_DASHES))
         # beside the topmost corner, but inside the picture
         column, row = outline[np.argmin(outline[:, 1])]
         axes.text(
