@@ -57,3 +57,9 @@ def test_the_folder_has_a_name_of_its_own_by_default(run, tmp_path, monkeypatch)
     monkeypatch.chdir(tmp_path)
     assert run("demo").exit_code == 0
     assert [p.name for p in tmp_path.iterdir()] == ["fringespan-demo"]
+
+
+def test_no_viewer_is_promised_that_is_not_there(run, tmp_path):
+    result = run("demo", "--out", tmp_path / "demo", "--view")
+    assert result.exit_code == 2
+    assert not list(tmp_path.iterdir())
