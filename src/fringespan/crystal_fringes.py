@@ -40,7 +40,10 @@ _CLEAR = 60.0
 _READABLE = 150.0
 """Power ratio from which the fringes' own phase and plateau are read; weaker ones take those of the crystal."""
 
-_FILLED = 0.8
+_STRAY = 0.02
+"""Peaks off the lattice of an uneven crystal that have less than this share of the strongest power are strays."""
+
+_FILLED = 0.6
 """A crystal that covers more of its region than this is measured in the whole region."""
 
 
@@ -164,7 +167,9 @@ def find_crystal_fringes(
     size = np.array(pixel_size)
     lattice = _lattice(scene, None, size)
     if lattice is not None:
-        scene = _with_lattice_points(scene, lattice, settings, aspect)
+        if uneven:
+            scene = _without_strays(scene, lattice, size)
+        scene = _with_lattice_points(scene, lattice, settings, aspect, size)
     return _assembled(scene, uneven, others, share, size, delocalisation_nm)
 
 
@@ -250,14 +255,38 @@ def _along_across(
     return along, np.sqrt(np.einsum("ki,kij,kj->k", turned, blocks, turned))
 
 
-def _with_lattice_points(scene: _Scene, lattice: LatticeFit, settings: MeasurementSettings, aspect: float) -> _Scene:
+def _without_strays(scene: _Scene, lattice: LatticeFit, size: NDArray[np.float64]) -> _Scene:
+    """Leave out weak peaks off the lattice of an uneven crystal: side lobes of its shape and sums with the film.
+
+    Those that have a lattice of their own stay, and those that are not weak.
+    """
+    fringes = scene.fringes
+    second = _second_lattice(scene, lattice, size)
+    own = second.member if second is not None else np.zeros(len(lattice.member), bool)
+    strays = ~lattice.member & ~own & (fringes.fit.power_ratio < _STRAY * fringes.fit.power_ratio.max())
+    if lattice.member.sum() < 4 or not strays.any():
+        return scene
+    stays = ~strays
+    fit, kept = fit_jointly(
+        scene.pixels, fringes.fit.demodulation.part(stays), fringes.density[stays], fringes.limit[stays]
+    )
+    kept = np.flatnonzero(stays)[kept]
+    residuals = replace(fringes.residuals, misfit=fringes.residuals.misfit[kept])
+    return replace(
+        scene,
+        fringes=Fringes(fit, fringes.density[kept], fringes.limit[kept], residuals),
+        at_lattice_point=scene.at_lattice_point[kept],
+    )
+
+
+def _with_lattice_points(
+    scene: _Scene, lattice: LatticeFit, settings: MeasurementSettings, aspect: float, size: NDArray[np.float64]
+) -> _Scene:
     """Look at the lattice points that show no peak yet, at the lower threshold that a known position allows."""
     fringes, footprint = scene.fringes, scene.footprint
     bins = np.array(footprint.shape)
-    members = fringes.fit.frequency[lattice.member]
-    # refit in cycles per pixel, plainly: the search needs it to a fraction of a bin only
-    basis = np.linalg.lstsq(lattice.index[lattice.member].astype(float), members, rcond=None)[0]
-    finest = 1.2 * np.hypot(*members.T).max()
+    basis = lattice.basis * size
+    finest = 1.2 * np.hypot(*(lattice.index[lattice.member] @ basis).T).max()
     point = lattice_points(basis, min(finest, 0.7)) @ basis
     point = point[np.abs(point).max(axis=1) < 0.48]
     taken = np.concatenate([fringes.fit.frequency, -fringes.fit.frequency])

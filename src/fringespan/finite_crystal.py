@@ -19,7 +19,7 @@ import numpy as np
 import scipy.ndimage
 from numpy.typing import NDArray
 
-from fringespan.extent import FringeField, filled_part
+from fringespan.extent import FringeField, crystal_mask, filled_part
 
 __all__ = [
     "CrystalFit",
@@ -267,12 +267,14 @@ def fit_crystal(
     spread, share, efficiency = np.zeros(n), np.zeros(n), np.ones(n)
     one_sided = np.zeros(n, bool)
     grid_y, grid_x = y[:, None], x[None]
+    common = crystal_mask(fields, np.sqrt(power_ratio))
     for k in range(n):
         field = fields.field[k]
         amplitude = np.abs(field)
         unit = frequency[k] / np.hypot(*frequency[k])
         mask = filled_part(amplitude, fields.inside, 0.5)
-        distance = scipy.ndimage.distance_transform_edt(np.pad(mask, 1), sampling=cell)[1:-1, 1:-1]
+        wm = mask = common if mask.sum() < 0.6 * common.sum() else mask
+        distance = scipy.ndimage.distance_transform_edt(np.pad(wm, 1), sampling=cell)[1:-1, 1:-1]
         weight = np.sin(np.pi / 2 * np.minimum(1, distance / (_TAPER_REACH * distance.max()))) ** 2
         length[k] = _extent_along(mask, y, x, *unit)
         width[k] = _extent_along(mask, y, x, unit[1], -unit[0])

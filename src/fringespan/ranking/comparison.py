@@ -18,7 +18,7 @@ from fringespan.ranking.search import find_candidates, seed_pairs
 from fringespan.ranking.unlisted import unlisted_evidence
 from fringespan.ranking.zone_tables import TABLE_D_MIN_NM, ZoneTables, zone_tables
 
-__all__ = ["Comparison", "compare", "evaluated_peaks"]
+__all__ = ["Comparison", "compare", "evidence_peaks"]
 
 SHARPNESS = 0.7
 """Power that the probabilities of picking reflections are raised to: below 1, as intensities in pictures are no better
@@ -32,7 +32,18 @@ _ALL_QUOTA = 400
 _MARGIN = 14.0
 """Hypotheses less probable than the best by more than this (natural logarithm) are dropped."""
 
-_MOST_PEAKS = 40
+MOST_EVIDENCE = 12
+LEAST_STRENGTH = 0.06
+"""Evidence are the 12 strongest peaks, as far as they reach 6 % of the strongest: beyond, side lobes and noise of a
+picture outnumber reflections. The others are given indices, but don't count."""
+
+_FALSE_GROWTH = 0.6
+_MOST_FALSE = 0.35
+_EVEN_SHARES = (0.03, 0.5)
+_EVEN_STRENGTHS = (0.5, 0.1)
+"""Of peaks half as strong as the strongest 3 % were picked regardless of intensity (beyond what the weights say), of
+those a tenth as strong one half."""
+
 _POPULATION = 30
 """With fewer phases in the list, the built-in ones stand for what crystals may look like."""
 
@@ -49,7 +60,8 @@ class Comparison:
     tables : ZoneTables
     peaks : ndarray of int, shape (n,)
         The observation's reflections that were compared, strongest first.
-    q, covariance, is_independent : ndarray, shape (n,), (n, 3), (n,)
+    q, covariance, is_independent, strength : ndarray, shape (n,), (n, 3), (n,), (n,)
+        Strength relative to the strongest.
     zone : ndarray of int, shape (h,)
     log_evidence, chi_squared : ndarray, shape (h,)
         Prior included.
@@ -73,6 +85,7 @@ class Comparison:
     q: NDArray[np.complex128]
     covariance: NDArray[np.float64]
     is_independent: NDArray[np.bool_]
+    strength: NDArray[np.float64]
     zone: NDArray[np.int64]
     log_evidence: NDArray[np.float64]
     chi_squared: NDArray[np.float64]
@@ -106,12 +119,27 @@ class Comparison:
         )
 
 
-def evaluated_peaks(observation: Observation) -> NDArray[np.int64]:
-    """Return the positions of the reflections that take part in a comparison, strongest first."""
+def evidence_peaks(observation: Observation) -> NDArray[np.int64]:
+    """Return the positions of the reflections that are evidence in a comparison, strongest first."""
     strength = np.array([r.signal_to_noise for r in observation.reflections])
+    is_trusted = np.array([r.role != "uncertain" for r in observation.reflections], dtype=bool)
+    is_trusted &= np.abs(observation.vectors()) * TABLE_D_MIN_NM <= 1.0
     order = np.argsort(-strength, kind="stable")
-    length = np.abs(observation.vectors())
-    return order[length[order] * TABLE_D_MIN_NM <= 1.0][:_MOST_PEAKS]
+    order = order[is_trusted[order]]
+    if not len(order):
+        return order
+    return order[strength[order] >= LEAST_STRENGTH * strength[order[0]]][:MOST_EVIDENCE]
+
+
+def _shares(strength: NDArray[np.float64], settings: RankingSettings) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return for strengths relative to the strongest how likely a peak is false, and picked regardless of intensity."""
+    weakness = np.log(np.maximum(strength, 1e-3))
+    false_share = np.minimum(settings.false_share * np.exp(-_FALSE_GROWTH * np.minimum(weakness, 0.0)), _MOST_FALSE)
+    false_share = np.maximum(false_share, min(settings.false_share, 0.99))
+    strong, weak = np.log(_EVEN_STRENGTHS)
+    low, high = _EVEN_SHARES
+    even_share = low + (high - low) * np.clip((weakness - strong) / (weak - strong), 0.0, 1.0)
+    return false_share, even_share
 
 
 def compare(
@@ -138,9 +166,14 @@ def compare(
     """
     phases = tuple(phases)
     tables = zone_tables(phases)
-    peaks = evaluated_peaks(observation) if only is None else only
+    peaks = evidence_peaks(observation) if only is None else only
     q, covariance = observation.vectors()[peaks], observation.covariances()[peaks]
-    is_independent = np.array([observation.reflections[i].is_independent for i in peaks], dtype=bool)
+    if len(peaks) < 2:
+        return None
+    is_independent = np.array([observation.reflections[i].role == "reflection" for i in peaks], dtype=bool)
+    strength = np.array([observation.reflections[i].signal_to_noise for i in peaks])
+    strength = strength / strength.max() if strength.max() > 0 else np.ones(len(peaks))
+    false_share, even_share = _shares(strength, settings)
     offset, prior_covariance, stated = _scale_prior(observation, settings, scale)
     if offset:
         q, covariance = q / (1 + offset), covariance / (1 + offset) ** 2
@@ -181,7 +214,8 @@ def compare(
         log_prior_det,
         area,
         longest,
-        settings.false_share,
+        false_share,
+        even_share,
         SHARPNESS,
         log_zone,
         tables.phase_of_zone,
@@ -201,7 +235,7 @@ def compare(
     kept = merge_orientations(candidates, log_evidence, turn, tables.pair_zone, tables.turns, _MARGIN)
     kept = kept[np.isfinite(log_evidence[kept])]
     unlisted = unlisted_evidence(
-        seeds, density + _DENSITY_FLOOR, q, covariance, is_independent, area, settings.false_share, SHARPNESS, _DECAY
+        seeds, density + _DENSITY_FLOOR, q, covariance, is_independent, area, false_share, even_share, SHARPNESS, _DECAY
     )
     fitted = fitted[kept]
     fitted[:, 0] += offset
@@ -212,6 +246,7 @@ def compare(
         q=observation.vectors()[peaks],
         covariance=observation.covariances()[peaks],
         is_independent=is_independent,
+        strength=strength,
         zone=tables.pair_zone[candidates[kept, 0]].astype(np.int64),
         log_evidence=log_evidence[kept],
         chi_squared=chi_squared[kept],

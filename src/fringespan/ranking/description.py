@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from fringespan.ranking.comparison import Comparison
 from fringespan.ranking.hypotheses import Hypothesis
+from fringespan.ranking.observation import Observation
 
 __all__ = ["described", "fit_limit", "normalised"]
 
@@ -22,6 +23,11 @@ _MOST_MISSING = 3
 _ALIKE_CHI_SQUARED = 6.0
 _MOST_COMPARED = 12
 _LIKELY = 1e-3
+_ENOUGH = 0.9999
+_EXPLAINED = 0.5
+"""Share of the peaks' power that a hypothesis must explain to fit."""
+
+_OPEN_GATE = 10.0
 
 
 @lru_cache(maxsize=256)
@@ -40,77 +46,54 @@ def normalised(comparison: Comparison) -> tuple[NDArray[np.float64], float]:
     return share[:-1], float(share[-1])
 
 
-def described(comparison: Comparison, number_of_peaks: int, most: int) -> tuple[Hypothesis, ...]:
+def described(comparison: Comparison, observation: Observation, most: int) -> tuple[Hypothesis, ...]:
     """Return the hypotheses of a comparison, one for each phase and zone, best first.
 
     Parameters
     ----------
-    number_of_peaks : int
-        How many the observation has; those that were not compared are left unexplained.
+    observation : Observation
+        Its reflections that were no evidence are given indices too.
     most : int
         Most hypotheses returned.
     """
     probability, _ = normalised(comparison)
     zones, first, inverse = np.unique(comparison.zone, return_index=True, return_inverse=True)
     summed = np.bincount(inverse, weights=probability, minlength=len(zones))
-    order = np.argsort(-summed, kind="stable")[:most]
+    order = np.argsort(-summed, kind="stable")
+    enough = int(np.searchsorted(np.cumsum(summed[order]), _ENOUGH * summed.sum())) + 1
+    order = order[: min(most, enough)]
     chosen = first[order]
     tables = comparison.tables
-    facts = _facts(
-        comparison.zone[chosen],
-        comparison.turn[chosen],
-        comparison.distortion[chosen],
-        comparison.node[chosen],
-        comparison.q,
-        comparison.covariance,
-        comparison.longest_per_nm,
-        tables.first,
-        tables.g,
-        tables.length,
-        tables.weight,
-        tables.kind,
+    q, covariance = observation.vectors(), observation.covariances()
+    node = np.full((len(chosen), len(q)), -1, dtype=np.int64)
+    node[:, comparison.peaks] = comparison.node[chosen]
+    is_open = np.ones(len(q), dtype=bool)
+    is_open[comparison.peaks] = False
+    orientation = comparison.zone[chosen], comparison.turn[chosen], comparison.distortion[chosen]
+    nets = tables.inverse_basis, tables.grid, tables.grid_first, tables.grid_reach
+    reflections = tables.first, tables.g, tables.length, tables.weight
+    pull, missing, rotation = _facts(
+        *orientation, node, is_open, q, covariance, comparison.longest_per_nm, *reflections, tables.kind, *nets
     )
-    pull, d_nm, missing, forbidden, rotation = facts
     compared = min(_MOST_COMPARED, int(np.count_nonzero(summed[order] > _LIKELY * summed.max(initial=0.0))))
     tolerance = 2 * math.sqrt(float(np.median((comparison.covariance[:, 0] + comparison.covariance[:, 2]) / 2)))
-    alike = _alike(
-        comparison.zone[chosen[:compared]],
-        comparison.turn[chosen[:compared]],
-        comparison.distortion[chosen[:compared]],
-        comparison.longest_per_nm,
-        tolerance,
-        tables.first,
-        tables.g,
-        tables.length,
-        tables.weight,
-        tables.inverse_basis,
-        tables.grid,
-        tables.grid_first,
-        tables.grid_reach,
-    )
+    alike = _alike(*(v[:compared] for v in orientation), comparison.longest_per_nm, tolerance, *reflections, *nets)
     members = (comparison.node[chosen] >= 0) & comparison.is_independent
     dof = np.maximum(2 * members.sum(axis=1) - 1, 1)
-    independent = int(comparison.is_independent.sum())
+    power = np.where(comparison.is_independent, comparison.strength**2, 0.0)
+    explained = (members * power).sum(axis=1) / max(power.sum(), 1e-300)
     names = [
         (comparison.phases[int(tables.phase_of_zone[z])].id, _three(tables.zone[z])) for z in comparison.zone[chosen]
     ]
     chi_squared = comparison.chi_squared[chosen]
-    places = comparison.peaks.tolist()
+    is_explained = node >= 0
+    indices = tables.hkl[node].tolist()
+    spacings = (1 / tables.length[node]).tolist()
+    is_forbidden = ((tables.kind[node] != 0) & is_explained).tolist()
+    known = is_explained.tolist()
     result = []
     for k, index in enumerate(chosen):
         zone = int(comparison.zone[index])
-        node = comparison.node[index].tolist()
-        hkl: list[tuple[int, int, int] | None] = [None] * number_of_peaks
-        pulls: list[float | None] = [None] * number_of_peaks
-        spacings: list[float | None] = [None] * number_of_peaks
-        has_none = [False] * number_of_peaks
-        indices = tables.hkl[comparison.node[index]].tolist()
-        for i, place in enumerate(places):
-            if node[i] >= 0:
-                a, b, c = indices[i]
-                hkl[place] = (a, b, c)
-                pulls[place], spacings[place] = float(pull[k, i]), float(d_nm[k, i])
-                has_none[place] = bool(forbidden[k, i])
         look_alikes = [
             names[m]
             for m in range(compared)
@@ -119,24 +102,23 @@ def described(comparison: Comparison, number_of_peaks: int, most: int) -> tuple[
         if tables.opposite_alike[zone]:
             u, v, w = names[k][1]
             look_alikes.append((names[k][0], (-u, -v, -w)))
-        explained = int(members[k].sum())
         result.append(
             Hypothesis(
                 phase=names[k][0],
                 structure=comparison.phases[int(tables.phase_of_zone[zone])],
                 zone=names[k][1],
                 probability=float(summed[order[k]]),
-                hkl=tuple(hkl),
+                hkl=tuple((h[0], h[1], h[2]) if yes else None for h, yes in zip(indices[k], known[k], strict=True)),
                 rotation_deg=float(rotation[k]),
                 scale=1 + float(comparison.distortion[index, 0]),
                 scale_uncertainty=float(comparison.scale_sigma[index]),
-                fits=bool(chi_squared[k] < fit_limit(int(dof[k])) and 2 * explained >= independent),
-                pulls=tuple(pulls),
-                expected_d_nm=tuple(spacings),
+                fits=bool(chi_squared[k] < fit_limit(int(dof[k])) and explained[k] >= _EXPLAINED),
+                pulls=tuple(v if yes else None for v, yes in zip(pull[k].tolist(), known[k], strict=True)),
+                expected_d_nm=tuple(v if yes else None for v, yes in zip(spacings[k], known[k], strict=True)),
                 chi_squared=float(chi_squared[k]),
                 degrees_of_freedom=int(dof[k]),
                 missing=tuple(_three(tables.hkl[m]) for m in missing[k] if m >= 0),
-                forbidden=tuple(has_none),
+                forbidden=tuple(is_forbidden[k]),
                 indistinguishable_from=tuple(look_alikes),
             )
         )
@@ -154,6 +136,7 @@ def _facts(
     turn: NDArray[np.complex128],
     distortion: NDArray[np.float64],
     node: NDArray[np.int64],
+    is_open: NDArray[np.bool_],
     q: NDArray[np.complex128],
     covariance: NDArray[np.float64],
     longest: float,
@@ -162,27 +145,31 @@ def _facts(
     length: NDArray[np.float64],
     weight: NDArray[np.float64],
     kind: NDArray[np.int8],
+    inverse_basis: NDArray[np.float64],
+    grid: NDArray[np.int32],
+    grid_first: NDArray[np.int32],
+    grid_reach: NDArray[np.int32],
 ) -> Any:
-    """Return pulls, spacings, strong reflections not seen, whether forbidden, and the rotation in degrees."""
+    """Give the open peaks their reflections; return pulls, strong reflections not seen, and the rotation in degrees."""
     count, n = node.shape
     pull = np.zeros((count, n))
-    d_nm = np.zeros((count, n))
-    forbidden = np.zeros((count, n), dtype=np.bool_)
     missing = np.full((count, _MOST_MISSING), -1, dtype=np.int64)
     rotation = np.zeros(count)
     for k in range(count):
         e0, e1, e2 = distortion[k]
         for i in range(n):
+            if is_open[i]:
+                near = _nearest(q[i], zone[k], turn[k], e0, e1, e2, inverse_basis, grid, grid_first, grid_reach)
+                if near >= 0:
+                    off = abs(q[i] - _placed(g[near] * turn[k], e0, e1, e2)) ** 2
+                    if off < _OPEN_GATE * (covariance[i, 0] + covariance[i, 2]) + (0.003 * abs(q[i])) ** 2:
+                        node[k, i] = near
             if node[k, i] < 0:
                 continue
-            p = g[node[k, i]] * turn[k]
-            r = complex(p.real * (1 + e0 + e1) + p.imag * e2, p.imag * (1 + e0 - e1) + p.real * e2)
             size = abs(q[i])
             nx, ny = q[i].real / size, q[i].imag / size
             variance = nx * nx * covariance[i, 0] + 2 * nx * ny * covariance[i, 1] + ny * ny * covariance[i, 2]
-            pull[k, i] = (size - abs(r)) / math.sqrt(variance)
-            d_nm[k, i] = 1 / length[node[k, i]]
-            forbidden[k, i] = kind[node[k, i]] != 0
+            pull[k, i] = (size - abs(_placed(g[node[k, i]] * turn[k], e0, e1, e2))) / math.sqrt(variance)
         found_axis = False
         for place in range(first[zone[k]], first[zone[k] + 1]):
             if kind[place] == 0 and not found_axis:
@@ -208,7 +195,37 @@ def _facts(
                     candidate, missing[k, m] = missing[k, m], candidate
                     if candidate < 0:
                         break
-    return pull, d_nm, missing, forbidden, rotation
+    return pull, missing, rotation
+
+
+@nb.njit(cache=True)
+def _placed(p: complex, e0: float, e1: float, e2: float) -> complex:
+    return complex(p.real * (1 + e0 + e1) + p.imag * e2, p.imag * (1 + e0 - e1) + p.real * e2)
+
+
+@nb.njit(cache=True)
+def _nearest(
+    q: complex,
+    zone: int,
+    turn: complex,
+    e0: float,
+    e1: float,
+    e2: float,
+    inverse_basis: NDArray[np.float64],
+    grid: NDArray[np.int32],
+    grid_first: NDArray[np.int32],
+    grid_reach: NDArray[np.int32],
+) -> int:
+    """Return the node of a zone nearest to a place of the picture, -1 where the table ends."""
+    m00, m01, m11 = 1 + e0 + e1, e2, 1 + e0 - e1
+    det = m00 * m11 - m01 * m01
+    back = complex((m11 * q.real - m01 * q.imag) / det, (m00 * q.imag - m01 * q.real) / det) * np.conj(turn)
+    m = round(back.real * inverse_basis[zone, 0, 0] + back.imag * inverse_basis[zone, 1, 0])
+    n = round(back.real * inverse_basis[zone, 0, 1] + back.imag * inverse_basis[zone, 1, 1])
+    reach0, reach1 = grid_reach[zone, 0], grid_reach[zone, 1]
+    if abs(m) > reach0 or abs(n) > reach1:
+        return -1
+    return int(grid[grid_first[zone] + (m + reach0) * (2 * reach1 + 1) + n + reach1])
 
 
 @nb.njit(cache=True)
@@ -235,24 +252,18 @@ def _alike(
         for b in range(count):
             if a == b:
                 continue
-            f0, f1, f2 = distortion[b]
-            m00, m01, m11 = 1 + f0 + f1, f2, 1 + f0 - f1
-            det = m00 * m11 - m01 * m01
-            reach0, reach1 = grid_reach[zone[b], 0], grid_reach[zone[b], 1]
             for place in range(first[zone[a]], first[zone[a] + 1]):
                 if length[place] * (1 + e0) > longest:
                     break
                 if weight[place] < 0.15:
                     continue
-                p = g[place] * turn[a]
-                x, y = p.real * (1 + e0 + e1) + p.imag * e2, p.imag * (1 + e0 - e1) + p.real * e2
-                back = complex((m11 * x - m01 * y) / det, (m00 * y - m01 * x) / det) * np.conj(turn[b])
-                m = round(back.real * inverse_basis[zone[b], 0, 0] + back.imag * inverse_basis[zone[b], 1, 0])
-                n = round(back.real * inverse_basis[zone[b], 0, 1] + back.imag * inverse_basis[zone[b], 1, 1])
-                other = -1
-                if abs(m) <= reach0 and abs(n) <= reach1:
-                    other = grid[grid_first[zone[b]] + (m + reach0) * (2 * reach1 + 1) + n + reach1]
-                if other < 0 or weight[other] < 0.03 or abs(back - g[other]) > 0.006 * abs(back) + tolerance:
+                seen = _placed(g[place] * turn[a], e0, e1, e2)
+                f0, f1, f2 = distortion[b]
+                near = _nearest(seen, zone[b], turn[b], f0, f1, f2, inverse_basis, grid, grid_first, grid_reach)
+                if near < 0 or weight[near] < 0.03:
+                    covered[a, b] = False
+                    break
+                if abs(seen - _placed(g[near] * turn[b], f0, f1, f2)) > 0.006 * abs(seen) + tolerance:
                     covered[a, b] = False
                     break
     return covered & covered.T

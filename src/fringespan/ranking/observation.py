@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,7 +13,10 @@ from numpy.typing import NDArray
 from fringespan.exceptions import CalibrationError, SettingsError
 from fringespan.measurement import Measurement
 
-__all__ = ["Observation", "ObservedReflection", "observation_of"]
+__all__ = ["Observation", "ObservedReflection", "Role", "observation_of"]
+
+Role = Literal["reflection", "combination", "uncertain"]
+_ROLES = ("reflection", "combination", "uncertain")
 
 _CRYSTAL_ACROSS = 0.3
 """An uneven crystal shifts a spacing's direction by this part of what it shifts its length by."""
@@ -32,26 +36,30 @@ class ObservedReflection:
     covariance_per_nm2 : ((float, float), (float, float))
         What the picture and the crystal leave uncertain; the pixel size's part, common to all, stays out of it.
     signal_to_noise : float, optional
-        Strength; only its order among the reflections counts.
-    is_independent : bool, optional
-        False: it may be a sum, difference or harmonic of others, or its position is not trusted; it is given indices,
-        but is no evidence for the lattice.
+        Strength, in the same unit for all reflections of a region; weak ones weigh little.
+    role : {"reflection", "combination", "uncertain"}, optional
+        "combination": it may be a sum, difference or harmonic of others, and is no evidence of its own for the lattice;
+        "uncertain": its position is not to be trusted. Both are given indices all the same.
 
     Raises
     ------
     SettingsError
-        If the vector is zero or not finite, or the covariance is none.
+        If the vector is zero or not finite, the covariance is none, the strength negative, or the role unknown.
     """
 
     g_per_nm: tuple[float, float]
     covariance_per_nm2: tuple[tuple[float, float], tuple[float, float]]
     signal_to_noise: float = 1.0
-    is_independent: bool = True
+    role: Role = "reflection"
 
     def __post_init__(self) -> None:
         length = math.hypot(*self.g_per_nm)
         if not (math.isfinite(length) and length > 0):
             raise SettingsError(f"g_per_nm must be finite and not zero, got {self.g_per_nm}")
+        if self.role not in _ROLES:
+            raise SettingsError(f"role must be one of {', '.join(_ROLES)}, got {self.role!r}")
+        if not (math.isfinite(self.signal_to_noise) and self.signal_to_noise >= 0):
+            raise SettingsError(f"signal_to_noise must be finite and at least 0, got {self.signal_to_noise!r}")
         covariance = np.asarray(self.covariance_per_nm2, dtype=np.float64)
         if covariance.shape != (2, 2) or not np.all(np.isfinite(covariance)):
             raise SettingsError(f"covariance_per_nm2 must be a finite 2 x 2 matrix, got {self.covariance_per_nm2!r}")
@@ -151,7 +159,7 @@ def observation_of(measurement: Measurement) -> Observation:
                 g_per_nm=(float(g[0]), float(g[1])),
                 covariance_per_nm2=_matrix(total),
                 signal_to_noise=float(peak.signal_to_noise),
-                is_independent=peak.combination_of is None and peak.withheld is None,
+                role="uncertain" if peak.withheld else "combination" if peak.combination_of else "reflection",
             )
         )
     return Observation(

@@ -137,7 +137,7 @@ def _ranking(
     of_phase = np.bincount(comparison.phase, weights=probability, minlength=len(phases))
     order = np.argsort(-of_phase, kind="stable")
     named = {phases[i].id: float(of_phase[i]) for i in order if of_phase[i] > 0}
-    matches = described(comparison, len(observation.reflections), settings.most_matches)
+    matches = described(comparison, observation, settings.most_matches)
     second = _second_crystal(observation, comparison, matches, phases, settings)
     verdict = verdict_of(matches, named, unlisted, second, settings)
     credible = _credible(named)
@@ -192,7 +192,7 @@ def _second_crystal(
     area = math.pi * rest.longest_per_nm**2 / 2
     as_noise = number * math.log(settings.false_share / area)
     as_crystal = math.log(_SECOND_CRYSTAL_PRIOR) + float(np.logaddexp.reduce(rest.log_evidence))
-    found = described(rest, len(observation.reflections), 1)[0]
+    found = described(rest, observation, 1)[0]
     if as_crystal - as_noise < math.log(_SECOND_CRYSTAL_ODDS) or not found.fits:
         return None
     if number == 2:

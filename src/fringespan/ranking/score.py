@@ -10,7 +10,8 @@ least squares gives the fit and, the model being linear, the exact integral over
 - which reflections were picked: drawn one after the other without replacement with the weights of the zone's table, so
   that a dense net, which has a reflection everywhere, pays for it, and so does a pattern whose strong reflections are
   missing;
-- peaks left unexplained: each costs `false_share` / area of the spectrum;
+- weak peaks are more often false, and more often reflections without kinematic intensity, than strong ones;
+- peaks left unexplained: each costs its `false_share` / area of the spectrum;
 - peaks marked as sums, differences or harmonics of others: they follow from those and say nothing about the lattice;
   being a reflection too counts a little in favour.
 """
@@ -189,7 +190,8 @@ def evaluate(
     log_prior_det: NDArray[np.float64],
     area: float,
     longest: float,
-    false_share: float,
+    false_share: NDArray[np.float64],
+    even_share: NDArray[np.float64],
     sharpness: float,
     log_zone: NDArray[np.float64],
     phase_of_zone: NDArray[np.int32],
@@ -224,7 +226,10 @@ def evaluate(
         ln of the determinant of their covariance.
     area, longest : float
         Half the spectrum's area in which peaks were looked for, and its radius.
-    false_share : float
+    false_share, even_share : ndarray, shape (n,)
+        Probability that a peak belongs to nothing, and that it was picked regardless of intensity.
+    sharpness : float
+        Power that the probabilities of picking are raised to after the second peak.
     log_zone : ndarray, shape (z,)
         Log prior of phase and zone, with the number of equivalent orientations.
 
@@ -253,7 +258,6 @@ def evaluate(
     used = np.empty(n, dtype=np.bool_)
     unit = np.zeros(4)
     unit[0] = 1.0
-    log_false = math.log(false_share / area)
     for c in range(count):
         row, low, high = candidates[c]
         zone = pair_zone[row]
@@ -295,6 +299,7 @@ def evaluate(
         reach = longest / (1 + x[0])
         stop = first[zone] + np.searchsorted(length[first[zone] : first[zone + 1]], reach)
         total = half_weight_up_to[stop - 1] if stop > first[zone] else 1e-9
+        available = max(0.5 * (stop - first[zone]), 1.0)
         for attempt in range(2):
             members = 0
             for i in range(n):
@@ -312,18 +317,19 @@ def evaluate(
                 if not is_independent[i]:
                     continue
                 if node[i] < 0:
-                    value += log_false
+                    value += math.log(false_share[i] / area)
                     continue
                 w = weight[node[i]]
                 power = 1.0 if picked < 2 else sharpness
                 picked += 1
-                pick = math.log(1 - false_share) + power * math.log(w / max(left, w))
+                chance = (1 - even_share[i]) * w / max(left, w) + even_share[i] / available
+                pick = math.log(1 - false_share[i]) + power * math.log(chance)
                 left -= w
                 p = g[node[i]] * turn
                 rx = q[i].real - (p.real * (1 + x[0] + x[1]) + p.imag * x[2])
                 ry = q[i].imag - (p.imag * (1 + x[0] - x[1]) + p.real * x[2])
                 own_square = inverse[i, 0] * rx * rx + 2 * inverse[i, 1] * rx * ry + inverse[i, 2] * ry * ry
-                if attempt == 0 and pick + log_norm[i] - 0.5 * own_square < log_false:
+                if attempt == 0 and pick + log_norm[i] - 0.5 * own_square < math.log(false_share[i] / area):
                     node[i] = -1
                     dropped = True
                 value += pick + log_norm[i]

@@ -31,7 +31,7 @@ def candidates_by_spacing(
     """
     stated = observation.pixel_size_relative_uncertainty
     scale = settings.scale_when_unstated if stated is None else float(np.max(stated))
-    own = [i for i, r in enumerate(observation.reflections) if r.is_independent] or list(
+    own = [i for i, r in enumerate(observation.reflections) if r.role == "reflection"] or list(
         range(len(observation.reflections))
     )
     length = np.abs(observation.vectors())

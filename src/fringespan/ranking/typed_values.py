@@ -105,7 +105,7 @@ def observation_from_text(
     given = [angle is not None for angle in angles[1:]]
     if any(given) and not all(given):
         raise SettingsError(
-            f"{given.count(False)} of {len(given)} spacings after the first have no angle; give all of them an angle from "
+            f"{given.count(False)} of {len(given)} later spacings have no angle; give all of them an angle from "
             "the first, or none"
         )
     reflections = []

@@ -23,7 +23,8 @@ def unlisted_evidence(
     covariance: NDArray[np.float64],
     is_independent: NDArray[np.bool_],
     area: float,
-    false_share: float,
+    false_share: NDArray[np.float64],
+    even_share: NDArray[np.float64],
     sharpness: float,
     decay: float,
 ) -> NDArray[np.float64]:
@@ -36,14 +37,13 @@ def unlisted_evidence(
     ----------
     density : ndarray, shape (s,)
         As `find_candidates` gives it, with a floor.
-    sharpness : float
+    false_share, even_share, sharpness
         As for `evaluate`.
     decay : float
         Nodes are drawn with weights exp(-decay (g / longest)^2), as reflections fade outwards in any crystal.
     """
     n = len(q)
     result = np.empty(len(seeds))
-    log_false = math.log(false_share / area)
     longest_squared = 2 * area / math.pi
     alpha = np.empty(n)
     beta = np.empty(n)
@@ -62,7 +62,6 @@ def unlisted_evidence(
             square = 0.0
             value = math.log(max(density[s], 1e-12) / jacobian) - _LOG_2PI + 2 * _LOG_2PI
             minors = divisor * divisor
-            members = 0
             is_member[:] = False
             for k in range(n):
                 if not is_independent[k]:
@@ -76,12 +75,12 @@ def unlisted_evidence(
                 )
                 is_pair = k in (i, j)
                 if not is_pair and (abs(d) ** 2 / spread > 10 or (u == 0 and v == 0)):
-                    value += log_false
+                    value += math.log(false_share[k] / area)
                     continue
                 xx, xy, yy = covariance[k, 0], covariance[k, 1], covariance[k, 2]
                 det = xx * yy - xy * xy
                 ixx, ixy, iyy = yy / det, -xy / det, xx / det
-                members += 1
+                value += math.log(1 - false_share[k])
                 is_member[k] = True
                 value += -_LOG_2PI - 0.5 * math.log(det)
                 square += ixx * d.real**2 + 2 * ixy * d.real * d.imag + iyy * d.imag**2
@@ -108,20 +107,21 @@ def unlisted_evidence(
             value += -0.5 * square - 0.5 * log_det
             nodes = area * divisor * divisor / (abs(cell) * max(abs(minors), 1))
             left = nodes * (1 - math.exp(-decay)) / decay
+            least = 0.25 * left  # a smoothed sum, of which the last reflections picked leave no certainty
             left -= math.exp(-decay * abs(q[i]) ** 2 / longest_squared) + math.exp(
                 -decay * abs(q[j]) ** 2 / longest_squared
             )
             for k in range(n):
                 if is_member[k] and k != i and k != j:
                     fading = math.exp(-decay * abs(q[k]) ** 2 / longest_squared)
-                    value += sharpness * math.log(fading / max(left, fading))
+                    chance = (1 - even_share[k]) * fading / max(left, fading, least) + even_share[k] / max(nodes, 1.0)
+                    value += sharpness * math.log(chance)
                     left -= fading
             for k in range(n):
                 if not is_independent[k]:
                     fading = math.exp(-decay * abs(q[k]) ** 2 / longest_squared)
-                    value += math.log(COMBINATION_SHARE + fading / max(left, fading))
+                    value += math.log(COMBINATION_SHARE + fading / max(left, fading, least))
                     left -= fading
-            value += members * math.log(1 - false_share)
             best = max(best, value)
         result[s] = best
     return result

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
 
 import numpy as np
@@ -206,8 +205,8 @@ def cautions_of(
                 Caution(
                     "ranking-thin-crystal",
                     "note",
-                    f"Some peaks are reflections that {best.structure.name}'s centring forbids; a crystal of a few layers "
-                    "shows them.",
+                    f"Some peaks are reflections that {best.structure.name}'s centring forbids; crystals of a few layers "
+                    "show them.",
                     "Check the thickness; in a thick crystal they speak against the phase.",
                 )
             )
@@ -216,8 +215,8 @@ def cautions_of(
                 Caution(
                     "ranking-forbidden",
                     "note",
-                    f"Some peaks are reflections without intensity in {best.structure.name} that double scattering brings "
-                    "back.",
+                    f"Some peaks are reflections without intensity in {best.structure.name}, brought back by double "
+                    "scattering.",
                     "Tilting the crystal makes them fade if they come from double scattering.",
                 )
             )
