@@ -115,10 +115,10 @@ def measure(
 
 def _delocalisation(micrograph: Micrograph) -> DelocalisationLaw | None:
     """Return the signed delocalisation as a function of g, where the lens and the pixel size are known."""
-    values = micrograph.voltage_kv, micrograph.cs_mm, micrograph.defocus_nm
-    if None in values or micrograph.pixel_size_nm is None:
+    voltage, cs, defocus = micrograph.voltage_kv, micrograph.cs_mm, micrograph.defocus_nm
+    if voltage is None or cs is None or defocus is None or micrograph.pixel_size_nm is None:
         return None
-    lens = Lens(*values)  # type: ignore[arg-type]
+    lens = Lens(voltage_kv=voltage, cs_mm=cs, defocus_nm=defocus)
     return lambda g_per_nm: np.asarray(signed_delocalisation_nm(g_per_nm, lens))
 
 

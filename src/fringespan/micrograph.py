@@ -182,8 +182,8 @@ class Micrograph:
         return np.asarray(self.pixels[rows, columns])
 
     def sha256(self) -> str:
-        """Return the SHA-256 checksum of the file, or of the pixels (C order, little-endian) if there is no file."""
-        if self.path is not None:
+        """Return the SHA-256 checksum of the file, or of the pixels if there is no single file (C order, little-endian)."""
+        if self.path is not None and self.path.is_file():
             with self.path.open("rb") as file:
                 return hashlib.file_digest(file, "sha256").hexdigest()
         pixels = np.ascontiguousarray(np.asarray(self.pixels[:, :]))

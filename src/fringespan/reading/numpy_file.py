@@ -27,7 +27,8 @@ def open_picture(path: Path, frame: int) -> StoredPicture:
     frame_axes = array.ndim - (3 if in_colour else 2)
     frames = array.shape[:frame_axes]
     count = math.prod(frames)
-    index = tuple(int(i) for i in np.unravel_index(check_frame(frame, count, path), frames)) if frames else ()
+    number = check_frame(frame, count, path)
+    index = tuple(int(i) for i in np.unravel_index(number, frames)) if frames else ()
     picture = array[index]
     if not in_colour:
         return StoredPicture(native_pixels(picture), count)
