@@ -20,15 +20,15 @@ from fringespan.ranking.zone_tables import TABLE_D_MIN_NM, ZoneTables, zone_tabl
 
 __all__ = ["Comparison", "compare", "evidence_peaks"]
 
-SHARPNESS = 0.7
+SHARPNESS = 0.8
 """Power that the probabilities of picking reflections are raised to: below 1, as intensities in pictures are no better
 known than that. Set by hand, so that the probabilities given come true in simulated trials."""
 
 _DECAY = 1.5
 _DENSITY_FLOOR = 0.01
-_MOST_SEEDS = 12
-_LEAST_QUOTA = 60
-_ALL_QUOTA = 400
+_MOST_SEEDS = 10
+_LEAST_QUOTA = 40
+_ALL_QUOTA = 300
 _MARGIN = 14.0
 """Hypotheses less probable than the best by more than this (natural logarithm) are dropped."""
 
@@ -131,7 +131,9 @@ def evidence_peaks(observation: Observation) -> NDArray[np.int64]:
     return order[strength[order] >= LEAST_STRENGTH * strength[order[0]]][:MOST_EVIDENCE]
 
 
-def _shares(strength: NDArray[np.float64], settings: RankingSettings) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def _shares(
+    strength: NDArray[np.float64], settings: RankingSettings
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return for strengths relative to the strongest how likely a peak is false, and picked regardless of intensity."""
     weakness = np.log(np.maximum(strength, 1e-3))
     false_share = np.minimum(settings.false_share * np.exp(-_FALSE_GROWTH * np.minimum(weakness, 0.0)), _MOST_FALSE)

@@ -284,7 +284,11 @@ def evaluate(
         pair_inverse[0], pair_inverse[1] = inverse[low], inverse[high]
         both = np.ones(2, dtype=np.bool_)
         own = np.arange(2)
-        _fit(right, pair_inverse, own, both, ends, turn, prior[phase], matrix, x)
+        for _ in range(2):
+            # twice: the rotation is not linear, and peaks may be known better than its square
+            _fit(right, pair_inverse, own, both, ends, turn, prior[phase], matrix, x)
+            turn *= complex(math.cos(x[3]), math.sin(x[3]))
+            x[3] = 0.0
         _assign(q, covariance, node, zone, turn, x, matrix, g, inverse_basis, grid, grid_first, grid_reach)
         square = 0.0
         log_det = 0.0
@@ -295,11 +299,6 @@ def evaluate(
             turn *= complex(math.cos(x[3]), math.sin(x[3]))
             x[3] = 0.0
             _assign(q, covariance, node, zone, turn, x, matrix, g, inverse_basis, grid, grid_first, grid_reach)
-        # sum of the weights that a pick is made among: the nodes within the part of the spectrum looked at
-        reach = longest / (1 + x[0])
-        stop = first[zone] + np.searchsorted(length[first[zone] : first[zone + 1]], reach)
-        total = half_weight_up_to[stop - 1] if stop > first[zone] else 1e-9
-        available = max(0.5 * (stop - first[zone]), 1.0)
         for attempt in range(2):
             members = 0
             for i in range(n):
@@ -309,6 +308,11 @@ def evaluate(
                 break
             square, log_det = _fit(q, inverse, node, used, g, turn, prior[phase], matrix, x)
             turn *= complex(math.cos(x[3]), math.sin(x[3]))
+            # sum of the weights that a pick is made among: the nodes within the part of the spectrum looked at
+            reach = longest / (1 + x[0])
+            stop = first[zone] + np.searchsorted(length[first[zone] : first[zone + 1]], reach)
+            total = half_weight_up_to[stop - 1] if stop > first[zone] else 1e-9
+            available = max(0.5 * (stop - first[zone]), 1.0)
             value = 0.0
             left = total
             picked = 0
@@ -324,7 +328,7 @@ def evaluate(
                 picked += 1
                 chance = (1 - even_share[i]) * w / max(left, w) + even_share[i] / available
                 pick = math.log(1 - false_share[i]) + power * math.log(chance)
-                left -= w
+                left = max(left - w, 0.0)
                 p = g[node[i]] * turn
                 rx = q[i].real - (p.real * (1 + x[0] + x[1]) + p.imag * x[2])
                 ry = q[i].imag - (p.imag * (1 + x[0] - x[1]) + p.real * x[2])
@@ -349,7 +353,7 @@ def evaluate(
             if node[i] >= 0:
                 w = weight[node[i]]
                 share += w / max(left, w)
-                left -= w
+                left = max(left - w, 0.0)
             value += math.log(share)
         value += -0.5 * square + 2 * _LOG_2PI - 0.5 * log_det - 0.5 * (3 * _LOG_2PI + log_prior_det[phase])
         log_evidence[c] = value + log_zone[zone] - _LOG_2PI

@@ -42,16 +42,16 @@ LARGEST_ZONE_INDEX = 4
 MOST_ZONES = 24
 """Zones with indices up to 4, of these the 24 with the shortest lattice vector along the beam."""
 
-PAIR_D_MIN_NM = 0.098
+PAIR_D_MIN_NM = 0.085
 _PAIR_ANGLE = np.radians(7.0)
 _MOST_PAIR_RATIO = 5.5
 _LEAST_PAIR_INTENSITY = 1e-5
 
-WEIGHT_EXPONENT = 0.5
+WEIGHT_EXPONENT = 0.4
 WEIGHT_FLOOR = 0.004
 WEIGHT_REACHABLE = 0.06
 WEIGHT_CENTRING = 0.01
-"""How likely a reflection is to be among the peaks picked: |F|^2 to the power 0.5 plus a floor; set by hand.
+"""How likely a reflection is to be among the peaks picked: |F|^2 to the power 0.4 plus a floor; set by hand.
 Reflections without kinematic intensity come with double scattering, those extinguished by the centring in crystals of a
 few layers."""
 
