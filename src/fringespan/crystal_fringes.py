@@ -19,7 +19,7 @@ from fringespan.finite_crystal import (
     why_broken,
 )
 from fringespan.lattice import LatticeFit, find_lattice, lattice_points
-from fringespan.noise import ring_background
+from fringespan.noise import RingBackground, ring_background, rings_at
 from fringespan.peaks.demodulation import demodulate
 from fringespan.peaks.detection import density_at, matched_ratio_at, waves_removed
 from fringespan.peaks.fringes import Fringes, find_fringes
@@ -27,6 +27,7 @@ from fringespan.peaks.joint_fit import fit_jointly
 from fringespan.peaks.misfit import MISFIT_LIMIT
 from fringespan.region import Footprint
 from fringespan.settings import MeasurementSettings
+from fringespan.spacings import diagonal_blocks
 from fringespan.spectrum import PowerSpectrum, RegionPixels, power_spectrum, prepare_pixels
 
 __all__ = ["CrystalFringes", "DelocalisationLaw", "find_crystal_fringes"]
@@ -118,6 +119,7 @@ class _Scene:
 
     pixels: RegionPixels
     spectrum: PowerSpectrum
+    background: RingBackground
     fringes: Fringes
     corner: tuple[int, int]
     at_lattice_point: NDArray[np.bool_]
@@ -169,8 +171,8 @@ def find_crystal_fringes(
     if lattice is not None:
         if uneven:
             scene = _without_strays(scene, lattice, size)
-        scene = _with_lattice_points(scene, lattice, settings, aspect, size)
-    return _assembled(scene, uneven, others, share, size, delocalisation_nm)
+        scene = _with_lattice_points(scene, lattice, settings, size)
+    return _assembled(scene, uneven, others, share, size, delocalisation_nm, lattice)
 
 
 def _scene(
@@ -180,14 +182,15 @@ def _scene(
     aspect: float,
     corner: tuple[int, int],
 ) -> _Scene:
+    background = ring_background(spectrum, aspect)
     fringes = find_fringes(
         pixels,
         spectrum,
-        ring_background(spectrum, aspect),
+        background,
         false_peaks_per_region=settings.false_peaks_per_region,
         smallest_distance_bins=settings.smallest_distance_bins,
     )
-    return _Scene(pixels, spectrum, fringes, corner, np.zeros(len(fringes.density), bool))
+    return _Scene(pixels, spectrum, background, fringes, corner, np.zeros(len(fringes.density), bool))
 
 
 def _part(
@@ -247,12 +250,12 @@ def _along_across(
     g: NDArray[np.float64], covariance: NDArray[np.float64], size: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return the standard uncertainties of each g along and across itself from the covariance in cycles per pixel."""
-    n = len(g)
-    unit = g / np.hypot(*g.T)[:, None]
-    blocks = np.array([covariance[2 * k : 2 * k + 2, 2 * k : 2 * k + 2] for k in range(n)]) / np.outer(size, size)
-    along = np.sqrt(np.einsum("ki,kij,kj->k", unit, blocks, unit))
-    turned = np.stack([unit[:, 1], -unit[:, 0]], axis=1)
-    return along, np.sqrt(np.einsum("ki,kij,kj->k", turned, blocks, turned))
+    unit = g / np.sqrt((g * g).sum(axis=1))[:, None]
+    blocks = diagonal_blocks(covariance) / (size[:, None] * size)
+    y, x = unit[:, 0], unit[:, 1]
+    yy, yx, xx = blocks[:, 0, 0], blocks[:, 0, 1], blocks[:, 1, 1]
+    along = np.sqrt(y * y * yy + 2 * y * x * yx + x * x * xx)
+    return along, np.sqrt(np.maximum(x * x * yy - 2 * y * x * yx + y * y * xx, 0.0))
 
 
 def _without_strays(scene: _Scene, lattice: LatticeFit, size: NDArray[np.float64]) -> _Scene:
@@ -280,7 +283,7 @@ def _without_strays(scene: _Scene, lattice: LatticeFit, size: NDArray[np.float64
 
 
 def _with_lattice_points(
-    scene: _Scene, lattice: LatticeFit, settings: MeasurementSettings, aspect: float, size: NDArray[np.float64]
+    scene: _Scene, lattice: LatticeFit, settings: MeasurementSettings, size: NDArray[np.float64]
 ) -> _Scene:
     """Look at the lattice points that show no peak yet, at the lower threshold that a known position allows."""
     fringes, footprint = scene.fringes, scene.footprint
@@ -296,10 +299,15 @@ def _with_lattice_points(
     if not len(point) or len(point) > 2000:
         return scene
     threshold = float(np.log(len(point) / settings.false_peaks_per_region)) + 1.0
-    background = ring_background(scene.spectrum, aspect)
     with waves_removed(scene.spectrum, footprint, fringes.fit.frequency, fringes.fit.amplitude) as rest:
-        density, samples = density_at(rest, background, point)
-        ratio = matched_ratio_at(rest, footprint, point) / density
+        power = matched_ratio_at(rest, footprint, point)
+        # the rings are a cheap first judge; they are hardly ever twice the local noise
+        worth = power > 0.4 * threshold * rings_at(scene.background, point * scene.spectrum.shape)
+        if not worth.any():
+            return scene
+        point = point[worth]
+        density, samples = density_at(rest, scene.background, point)
+        ratio = power[worth] / density
     limit = samples * np.expm1(threshold / samples)
     hopeful = ratio > 0.8 * limit
     if not hopeful.any():
@@ -333,6 +341,7 @@ def _assembled(
     share: float,
     size: NDArray[np.float64],
     delocalisation_nm: DelocalisationLaw | None,
+    first_lattice: LatticeFit | None,
 ) -> CrystalFringes:
     fit, misfit = scene.fringes.fit, scene.fringes.residuals.misfit
     n = len(fit.power_ratio)
@@ -356,7 +365,9 @@ def _assembled(
         crystal = _levelled(crystal, readable, fit.power_ratio)
     moved = replace(scene, fringes=replace(scene.fringes, fit=replace(fit, frequency=frequency, covariance=covariance)))
     sound = np.array([w is None for w in withheld], bool)
-    lattice = _lattice(moved, crystal, size)
+    # plane waves throughout and no further peak: the lattice is the one already found
+    settled = crystal is None and (first_lattice is None or len(first_lattice.member) == n)
+    lattice = first_lattice if settled else _lattice(moved, crystal, size)
     along, across, lattice_along, lattice_relative = _uncertainties(
         moved, crystal, lattice, sound, size, delocalisation_nm
     )
@@ -451,7 +462,7 @@ def _uncertainties(
     if lattice is not None:
         unit = g / np.hypot(*g.T)[:, None]
         jacobian = np.concatenate([lattice.index[:, :1] * unit, lattice.index[:, 1:] * unit], axis=1)
-        formal = np.sqrt(np.einsum("ki,ij,kj->k", jacobian, lattice.covariance, jacobian))
+        formal = np.sqrt(((jacobian @ lattice.covariance) * jacobian).sum(axis=1))
         kappa = floor if crystal is not None else 0.0
         lattice_along = np.hypot(0.9 * formal, kappa / length) * scale
         relative = float(np.median(kappa / length / np.hypot(*g.T)))

@@ -5,12 +5,13 @@ from __future__ import annotations
 import itertools
 from dataclasses import dataclass
 
+import numba
 import numpy as np
 from numpy.typing import NDArray
 
 __all__ = ["LatticeFit", "PlaneLattice", "combinations", "find_lattice", "lattice_points", "plane_lattice"]
 
-_STRONGEST = 10
+_STRONGEST = 8
 _HIGHEST_INDEX = 12
 _HUBER = 2.0
 _LEAST_EVIDENCE = 6.0
@@ -111,130 +112,219 @@ def find_lattice(
     if len(g) < 3:
         return None
     order = np.argsort(-strength)[:_STRONGEST]
-    vectors = [g[k] for k in order]
-    vectors += [a + s * b for a, b in itertools.combinations(vectors[:6], 2) for s in (1, -1)]
-    candidates = np.array(vectors)
-    first, second = (np.array(v) for v in zip(*itertools.combinations(range(len(candidates)), 2), strict=True))
-    bases = np.stack([candidates[first], candidates[second]], axis=1)
-    lengths = np.hypot(*bases.transpose(2, 0, 1))
-    area = np.abs(bases[:, 0, 0] * bases[:, 1, 1] - bases[:, 0, 1] * bases[:, 1, 0])
-    bases = bases[area > 0.15 * lengths.prod(axis=1)]
-    if not len(bases):
+    vectors = _with_differences(g[order], min(5, len(order)))
+    unit = g / np.sqrt((g * g).sum(axis=1))[:, None]
+    evidence, basis = _best_basis(vectors, g, unit, sigma_along, sigma_across)
+    if evidence < _LEAST_EVIDENCE:
         return None
-    unit = g / np.hypot(*g.T)[:, None]
-    score = np.array([_score(basis, g, unit, sigma_along, sigma_across)[0] for basis in _distinct(bases)])
-    best: tuple[float, NDArray[np.float64]] | None = None
-    for k in np.argsort(-score)[:8]:
-        basis = _distinct(bases)[k]
-        for _ in range(3):
-            _, index, member = _score(basis, g, unit, sigma_along, sigma_across)
-            if np.linalg.matrix_rank(index[member]) < 2:
-                break
-            basis = _weighted_fit(g, unit, sigma_along, sigma_across, index, member)[0]
-        value = _score(basis, g, unit, sigma_along, sigma_across)[0]
-        if best is None or value > best[0]:
-            best = value, basis
-    assert best is not None
-    basis = _reduced(best[1])
-    _, index, member = _score(basis, g, unit, sigma_along, sigma_across)
-    if member.sum() < 3 or np.linalg.matrix_rank(index[member]) < 2 or best[0] < _LEAST_EVIDENCE:
+    basis = _reduced(basis)
+    index, member = np.empty((len(g), 2), np.int64), np.empty(len(g), np.bool_)
+    _score(basis, g, unit, sigma_along, sigma_across, index, member)
+    if member.sum() < 3 or not _spans_plane(index, member):
         return None
-    basis, covariance, scatter = _weighted_fit(g, unit, sigma_along, sigma_across, index, member)
-    residual = g - index @ basis
-    return LatticeFit(basis, covariance, index, member, (residual * unit).sum(axis=1), scatter)
-
-
-def _distinct(bases: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Return the bases reduced, without repetitions."""
-    reduced = np.array([_reduced(b) for b in bases])
-    scale = np.abs(reduced).max()
-    return reduced[np.unique((reduced / scale * 200).round().reshape(len(reduced), 4), axis=0, return_index=True)[1]]
-
-
-def _score(
-    basis: NDArray[np.float64],
-    g: NDArray[np.float64],
-    unit: NDArray[np.float64],
-    sigma_along: NDArray[np.float64],
-    sigma_across: NDArray[np.float64],
-) -> tuple[float, NDArray[np.int64], NDArray[np.bool_]]:
-    """Return the evidence for a basis beyond its two free vectors, the nearest points, and who lies on it."""
-    index = np.rint(g @ np.linalg.inv(basis)).astype(np.int64)
+    basis, normal, scatter = _weighted_fit(g, unit, sigma_along, sigma_across, index, member)
     residual = g - index @ basis
     along = (residual * unit).sum(axis=1)
-    across = residual[:, 0] * unit[:, 1] - residual[:, 1] * unit[:, 0]
-    # the basis comes from peaks as uncertain as these: their error grows with the index
-    grown = 1 + 0.3 * np.abs(index).sum(axis=1)
-    chi2 = (along / (sigma_along * grown)) ** 2 + (across / (sigma_across * grown)) ** 2
-    cell = abs(np.linalg.det(basis))
-    gain = np.log(cell / (2 * np.pi * sigma_along * sigma_across * grown**2)) - chi2 / 2
-    member = (chi2 < 12) & (np.abs(index).max(axis=1) <= _HIGHEST_INDEX) & (np.abs(index).max(axis=1) > 0)
-    gains = np.sort(np.where(member, np.maximum(gain, 0), 0))[::-1]
-    return float(gains[2:].sum()), index, member
+    return LatticeFit(basis, np.linalg.inv(normal) * scatter**2, index, member, along, float(scatter))
 
 
-def _weighted_fit(
-    g: NDArray[np.float64],
-    unit: NDArray[np.float64],
-    sigma_along: NDArray[np.float64],
-    sigma_across: NDArray[np.float64],
-    index: NDArray[np.int64],
-    member: NDArray[np.bool_],
-) -> tuple[NDArray[np.float64], NDArray[np.float64], float]:
-    """Fit the basis by Huber-weighted least squares; return it, its covariance, and the scatter (at least 1)."""
-    m = index[member].astype(float)
-    n = unit[member]
-    across = np.stack([n[:, 1], -n[:, 0]], axis=1)
+@numba.njit(cache=True, nogil=True)
+def _with_differences(g, count):  # type: ignore[no-untyped-def]
+    """Return the vectors, and the sums and differences of the first few."""
+    n = g.shape[0]
+    out = np.empty((n + count * (count - 1), 2))
+    out[:n] = g
+    k = n
+    for i in range(count):
+        for j in range(i):
+            out[k] = g[i] + g[j]
+            out[k + 1] = g[i] - g[j]
+            k += 2
+    return out
+
+
+@numba.njit(cache=True, nogil=True)
+def _best_basis(vectors, g, unit, sigma_along, sigma_across):  # type: ignore[no-untyped-def]
+    """Return the evidence for the best basis among all pairs of vectors, and that basis, fitted to its members."""
+    kept = 8
+    best = np.full(kept, -1.0)
+    bases = np.zeros((kept, 2, 2))
+    index = np.empty((g.shape[0], 2), np.int64)
+    member = np.empty(g.shape[0], np.bool_)
+    basis = np.empty((2, 2))
+    for i in range(vectors.shape[0]):
+        for j in range(i):
+            basis[0] = vectors[i]
+            basis[1] = vectors[j]
+            area = abs(basis[0, 0] * basis[1, 1] - basis[0, 1] * basis[1, 0])
+            if area**2 < 0.0225 * (basis[0] ** 2).sum() * (basis[1] ** 2).sum():
+                continue
+            reduced = _reduced(basis)
+            seen = False
+            near = 0.005 * (abs(reduced[0, 0]) + abs(reduced[0, 1]))
+            for k in range(kept):
+                if (
+                    best[k] >= 0
+                    and abs(bases[k, 0, 0] - reduced[0, 0]) < near
+                    and abs(bases[k, 0, 1] - reduced[0, 1]) < near
+                    and abs(bases[k, 1, 0] - reduced[1, 0]) < near
+                    and abs(bases[k, 1, 1] - reduced[1, 1]) < near
+                ):
+                    seen = True
+            if seen:
+                continue
+            value = _score(reduced, g, unit, sigma_along, sigma_across, index, member)
+            lowest = np.argmin(best)
+            if value > best[lowest]:
+                best[lowest] = value
+                bases[lowest] = reduced
+    winner = -1.0
+    result = np.zeros((2, 2))
+    for k in range(kept):
+        if best[k] < 0:
+            continue
+        basis = bases[k].copy()
+        for _ in range(3):
+            _score(basis, g, unit, sigma_along, sigma_across, index, member)
+            if not _spans_plane(index, member):
+                break
+            basis = _weighted_fit(g, unit, sigma_along, sigma_across, index, member)[0]
+        value = _score(basis, g, unit, sigma_along, sigma_across, index, member)
+        if value > winner:
+            winner = value
+            result = basis
+    return winner, result
+
+
+@numba.njit(cache=True, nogil=True)
+def _spans_plane(index, member):  # type: ignore[no-untyped-def]
+    """Say whether the members' indices are not all on one line through the origin."""
+    for i in range(member.size):
+        for j in range(i):
+            if member[i] and member[j] and index[i, 0] * index[j, 1] != index[i, 1] * index[j, 0]:
+                return True
+    return False
+
+
+@numba.njit(cache=True, nogil=True)
+def _score(basis, g, unit, sigma_along, sigma_across, index, member):  # type: ignore[no-untyped-def]
+    """Return the evidence for a basis beyond its two free vectors; fill in the nearest points and who lies on it."""
+    n = g.shape[0]
+    cell = basis[0, 0] * basis[1, 1] - basis[0, 1] * basis[1, 0]
+    first, second, total = 0.0, 0.0, 0.0
+    for k in range(n):
+        member[k] = False
+        if cell == 0:
+            continue
+        a = np.rint((g[k, 0] * basis[1, 1] - g[k, 1] * basis[1, 0]) / cell)
+        b = np.rint((g[k, 1] * basis[0, 0] - g[k, 0] * basis[0, 1]) / cell)
+        dy = g[k, 0] - a * basis[0, 0] - b * basis[1, 0]
+        dx = g[k, 1] - a * basis[0, 1] - b * basis[1, 1]
+        # the basis comes from peaks as uncertain as these: their error grows with the index
+        grown = 1 + 0.3 * (abs(a) + abs(b))
+        along = (dy * unit[k, 0] + dx * unit[k, 1]) / (sigma_along[k] * grown)
+        across = (dy * unit[k, 1] - dx * unit[k, 0]) / (sigma_across[k] * grown)
+        chi2 = along * along + across * across
+        index[k, 0], index[k, 1] = int(a), int(b)
+        highest = max(abs(a), abs(b))
+        if chi2 < 12 and 0 < highest <= _HIGHEST_INDEX:
+            member[k] = True
+            gain = np.log(abs(cell) / (2 * np.pi * sigma_along[k] * sigma_across[k] * grown**2)) - chi2 / 2
+            if gain > 0:
+                total += gain
+                # two peaks always fit a basis made for them: the two that gain most do not count
+                if gain > first:
+                    first, second = gain, first
+                elif gain > second:
+                    second = gain
+    return total - first - second
+
+
+@numba.njit(cache=True, nogil=True)
+def _weighted_fit(g, unit, sigma_along, sigma_across, index, member):  # type: ignore[no-untyped-def]
+    """Fit the basis by Huber-weighted least squares; return it, the normal matrix, and the scatter (at least 1)."""
+    count = 0
+    for k in range(member.size):
+        count += member[k]
     # unknowns b0y b0x b1y b1x; each peak gives one equation along and one across its vector
-    rows = np.concatenate(
-        [
-            np.concatenate([m[:, :1] * n, m[:, 1:] * n], axis=1) / sigma_along[member][:, None],
-            np.concatenate([m[:, :1] * across, m[:, 1:] * across], axis=1) / sigma_across[member][:, None],
-        ]
-    )
-    right = np.concatenate(
-        [(g[member] * n).sum(axis=1) / sigma_along[member], (g[member] * across).sum(axis=1) / sigma_across[member]]
-    )
-    weight = np.ones(len(right))
+    rows = np.empty((2 * count, 4))
+    right = np.empty(2 * count)
+    m = 0
+    for k in range(member.size):
+        if not member[k]:
+            continue
+        for side in range(2):
+            vy = unit[k, 0] if side == 0 else unit[k, 1]
+            vx = unit[k, 1] if side == 0 else -unit[k, 0]
+            sigma = sigma_along[k] if side == 0 else sigma_across[k]
+            rows[m, 0], rows[m, 1] = index[k, 0] * vy / sigma, index[k, 0] * vx / sigma
+            rows[m, 2], rows[m, 3] = index[k, 1] * vy / sigma, index[k, 1] * vx / sigma
+            right[m] = (g[k, 0] * vy + g[k, 1] * vx) / sigma
+            m += 1
+    weight = np.ones(2 * count)
+    solution = np.zeros(4)
+    normal = np.eye(4)
+    residual = right.copy()
     for _ in range(8):
-        root = np.sqrt(weight)
-        solution = np.linalg.lstsq(rows * root[:, None], right * root, rcond=None)[0]
+        weighted = rows * weight.reshape(-1, 1)
+        normal = weighted.T @ rows
+        solution = np.linalg.solve(normal, weighted.T @ right)
         residual = right - rows @ solution
-        weight = np.minimum(1, _HUBER / np.maximum(np.abs(residual), 1e-12))
-    normal = (rows * weight[:, None]).T @ rows
-    count = int(member.sum())
-    along = residual[:count]
-    scatter = np.sqrt(np.sum(np.minimum(along**2, 9)) / max(count - 2, 1))
-    scatter = max(1.0, float(scatter))
-    return solution.reshape(2, 2), np.linalg.inv(normal) * scatter**2, scatter
+        weight = np.minimum(1.0, _HUBER / np.maximum(np.abs(residual), 1e-12))
+    squares = 0.0
+    for k in range(count):
+        squares += min(residual[2 * k] ** 2, 9.0)
+    scatter = max(1.0, np.sqrt(squares / max(count - 2, 1)))
+    return solution.reshape(2, 2).copy(), normal, scatter
 
 
-def _reduced(basis: NDArray[np.float64]) -> NDArray[np.float64]:
+@numba.njit(cache=True, nogil=True)
+def _reduced(basis):  # type: ignore[no-untyped-def]
     """Return the Gauss-reduced basis: shortest vectors, at 60 to 90 degrees, the first pointing right."""
-    a, b = basis[0].copy(), basis[1].copy()
-    if a @ a > b @ b:
-        a, b = b, a
-    while True:
-        b = b - np.rint(a @ b / (a @ a)) * a
-        if b @ b >= a @ a * (1 - 1e-12):
+    ay, ax, by, bx = basis[0, 0], basis[0, 1], basis[1, 0], basis[1, 1]
+    if ay * ay + ax * ax > by * by + bx * bx:
+        ay, ax, by, bx = by, bx, ay, ax
+    for _ in range(100):
+        squared = ay * ay + ax * ax
+        times = np.rint((ay * by + ax * bx) / squared)
+        by -= times * ay
+        bx -= times * ax
+        if by * by + bx * bx >= squared * (1 - 1e-12):
             break
-        a, b = b, a
-    if a[1] < 0 or (a[1] == 0 and a[0] > 0):
-        a = -a
-    if a @ b < 0:
-        b = -b
-    return np.array([a, b])
+        ay, ax, by, bx = by, bx, ay, ax
+    if ax < 0 or (ax == 0 and ay > 0):
+        ay, ax = -ay, -ax
+    if ay * by + ax * bx < 0:
+        by, bx = -by, -bx
+    out = np.empty((2, 2))
+    out[0, 0], out[0, 1], out[1, 0], out[1, 1] = ay, ax, by, bx
+    return out
 
 
 def lattice_points(basis: NDArray[np.float64], longest: float) -> NDArray[np.int64]:
     """Return the indices of one of each pair of opposite lattice points up to a length, shape (n, 2)."""
-    shortest = np.sqrt(np.linalg.eigvalsh(basis @ basis.T)[0])
+    return np.asarray(_points(basis, longest))
+
+
+@numba.njit(cache=True, nogil=True)
+def _points(basis, longest):  # type: ignore[no-untyped-def]
+    # the smallest singular value of the basis bounds the length of a lattice vector from below
+    p = (basis[0] ** 2).sum()
+    q = (basis[1] ** 2).sum()
+    r = (basis[0] * basis[1]).sum()
+    shortest = np.sqrt(max((p + q) / 2 - np.sqrt(((p - q) / 2) ** 2 + r * r), 1e-300))
     most = min(int(longest / shortest) + 1, 60)
-    m, n = (v.ravel() for v in np.meshgrid(np.arange(-most, most + 1), np.arange(-most, most + 1), indexing="ij"))
-    index = np.stack([m, n], axis=1)
-    g = index @ basis
-    half = (g[:, 1] > 0) | ((g[:, 1] == 0) & (g[:, 0] < 0))
-    return index[half & (np.hypot(*g.T) <= longest)]
+    out = np.empty(((2 * most + 1) ** 2, 2), np.int64)
+    found = 0
+    for m in range(-most, most + 1):
+        for n in range(-most, most + 1):
+            y = m * basis[0, 0] + n * basis[1, 0]
+            x = m * basis[0, 1] + n * basis[1, 1]
+            if (x > 0 or (x == 0 and y < 0)) and y * y + x * x <= longest * longest:
+                out[found, 0] = m
+                out[found, 1] = n
+                found += 1
+    return out[:found]
 
 
 def combinations(
@@ -256,13 +346,19 @@ def combinations(
         Positions of the peaks it is made of; (k, k) for the second harmonic of k.
     """
     result: list[tuple[int, ...] | None] = [None] * len(index)
-    for k in np.flatnonzero(member):
-        stronger = [j for j in np.flatnonzero(member & (strength > strength[k])) if j != k]
-        target = index[k]
-        for a, b in itertools.combinations_with_replacement(stronger, 2):
-            if any((sa * index[a] + sb * index[b] == target).all() for sa in (1, -1) for sb in (1, -1)):
-                result[k] = (int(a), int(b))
+    order = [int(k) for k in np.argsort(-strength, kind="stable") if member[k]]
+    points = [tuple(point) for point in index.tolist()]
+    stronger: dict[tuple[int, int], int] = {}
+    for k in order:
+        m, n = points[k]
+        for a, position in stronger.items():
+            other = stronger.get((m - a[0], n - a[1]))
+            if other is not None:
+                result[k] = (min(position, other), max(position, other))
                 break
+        # either of two opposite points stands for the same peak
+        stronger.setdefault((m, n), k)
+        stronger.setdefault((-m, -n), k)
     return result
 
 
@@ -282,17 +378,6 @@ def plane_lattice(
     geometry : ndarray, shape (2, 2), or None
         nm per pixel, as `Micrograph.geometry_nm_per_px`.
     """
-    def derived(flat: NDArray[np.float64]) -> NDArray[np.float64]:
-        a = np.linalg.inv(flat.reshape(2, 2)).T
-        lengths = np.hypot(*a.T)
-        cross = a[0, 0] * a[1, 1] - a[0, 1] * a[1, 0]
-        return np.array([*lengths, np.degrees(np.arctan2(abs(cross), a[0] @ a[1]))])
-
-    def uncertainties(flat: NDArray[np.float64], covariance: NDArray[np.float64]) -> NDArray[np.float64]:
-        step = 1e-6 * np.abs(flat).max()
-        slope = np.array([(derived(flat + d) - derived(flat - d)) / (2 * step) for d in step * np.eye(4)])
-        return np.sqrt(np.einsum("ia,ij,ja->a", slope, covariance, slope))
-
     px = fit.basis
     sigma_px = np.hypot(np.sqrt(np.diag(fit.covariance)).reshape(2, 2), crystal_relative * np.abs(px))
     if geometry is None:
@@ -300,16 +385,18 @@ def plane_lattice(
         flat, covariance = px.ravel(), fit.covariance
     else:
         transform = np.linalg.inv(geometry)
-        both = np.kron(np.eye(2), transform.T)
+        both = np.zeros((4, 4))
+        both[:2, :2] = both[2:, 2:] = transform.T
         nm = px @ transform
         flat, covariance = nm.ravel(), both @ fit.covariance @ both.T
         sigma_nm = np.hypot(np.sqrt(np.diag(covariance)).reshape(2, 2), crystal_relative * np.abs(nm))
         real_nm = np.linalg.inv(nm).T
-    values, sigma = derived(flat), uncertainties(flat, covariance)
+    values, sigma = _real_space(flat, covariance)
     if geometry is not None:
         lengths = float(values[0]), float(values[1])
-        length_sigma = float(np.hypot(sigma[0], crystal_relative * values[0])), float(
-            np.hypot(sigma[1], crystal_relative * values[1])
+        length_sigma = (
+            float(np.hypot(sigma[0], crystal_relative * values[0])),
+            float(np.hypot(sigma[1], crystal_relative * values[1])),
         )
     return PlaneLattice(
         reciprocal_per_px=px,
@@ -325,3 +412,24 @@ def plane_lattice(
         residual_rms=fit.scatter,
         members=tuple(int(k) for k in np.flatnonzero(fit.member)),
     )
+
+
+def _real_space(
+    flat: NDArray[np.float64], covariance: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return both lengths and the angle of the real-space basis, and their standard uncertainties by differences."""
+    step = 1e-6 * np.abs(flat).max()
+    b = (flat + step * np.concatenate([np.zeros((1, 4)), np.eye(4), -np.eye(4)])).reshape(9, 2, 2)
+    determinant = b[:, 0, 0] * b[:, 1, 1] - b[:, 0, 1] * b[:, 1, 0]
+    squares = (b * b).sum(axis=2)
+    product = (b[:, 0] * b[:, 1]).sum(axis=1)
+    # a1 is perpendicular to b2, so |a1| = |b2| / |det|; the angle between a1 and a2 is the supplement of that of b1, b2
+    values = np.stack(
+        [
+            np.sqrt(squares[:, 1]) / np.abs(determinant),
+            np.sqrt(squares[:, 0]) / np.abs(determinant),
+            np.degrees(np.arctan2(np.abs(determinant), -product)),
+        ]
+    )
+    slope = (values[:, 1:5] - values[:, 5:]) / (2 * step)
+    return values[:, 0], np.sqrt(np.maximum(((slope @ covariance) * slope).sum(axis=1), 0.0))

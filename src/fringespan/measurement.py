@@ -16,7 +16,7 @@ from fringespan.lattice import PlaneLattice, combinations, plane_lattice
 from fringespan.micrograph import Micrograph
 from fringespan.region import PlacedRegion, Region, place_region
 from fringespan.settings import MeasurementSettings
-from fringespan.spacings import PairAngle, Peak, Scale, pair_angles, spacings_of
+from fringespan.spacings import PairAngle, Peak, Scale, diagonal_blocks, pair_angles, spacings_of
 from fringespan.spectrum import PowerSpectrum, RegionPixels, power_spectrum, prepare_pixels
 
 __all__ = ["Measurement", "measure"]
@@ -128,7 +128,7 @@ def _peaks(
     n = len(found.power_ratio)
     if n == 0:
         return (), ()
-    blocks = np.moveaxis(np.diagonal(found.covariance.reshape(n, 2, n, 2), axis1=0, axis2=2), -1, 0)
+    blocks = diagonal_blocks(found.covariance)
     spacings = spacings_of(found.frequency, blocks, found.crystal_along, found.crystal_across, scale)
     angles = pair_angles(spacings, found.covariance, scale, found.crystal_across)
     in_nm = scale.geometry is not None

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from fringespan.spectrum import PowerSpectrum
 
-__all__ = ["RingBackground", "ring_background"]
+__all__ = ["RingBackground", "ring_background", "rings_at"]
 
 _SAMPLES = 160
 _INDEPENDENT_SHARE = 1.2
@@ -209,3 +209,9 @@ def ring_background(spectrum: PowerSpectrum, aspect: float = 1.0) -> RingBackgro
     table = np.empty(rings.table_position.size, np.float32)
     _ring_density(spectrum.power, rings.samples, rings.counts, rings.table_position, table)
     return RingBackground(table, rings.table_samples, rings.step)
+
+
+def rings_at(background: RingBackground, place: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the background at places given in bins (row, column), shape (n, 2)."""
+    radius = np.sqrt(((place * background.step) ** 2).sum(axis=1)) * _TABLE_STEPS
+    return np.asarray(background.density[np.minimum(radius.astype(int), len(background.density) - 1)], dtype=float)

@@ -102,8 +102,7 @@ class Region:
     @classmethod
     def whole(cls, shape: Sequence[int], name: str = "whole picture") -> Region:
         """Return the region that holds every pixel of a picture of this shape (rows, columns)."""
-        bottom, right = shape[0] - 0.5, shape[1] - 0.5
-        return cls(name, ((-0.5, -0.5), (-0.5, right), (bottom, right), (bottom, -0.5)), "whole picture")
+        return _whole(int(shape[0]), int(shape[1]), name)
 
 
 @dataclass(frozen=True, eq=False)
@@ -162,6 +161,12 @@ class PlacedRegion:
     columns: slice
     footprint: Footprint
     cautions: tuple[Caution, ...] = ()
+
+
+@lru_cache(maxsize=16)
+def _whole(rows: int, columns: int, name: str) -> Region:
+    bottom, right = rows - 0.5, columns - 0.5
+    return Region(name, ((-0.5, -0.5), (-0.5, right), (bottom, right), (bottom, -0.5)), "whole picture")
 
 
 def place_region(region: Region, picture_shape: tuple[int, int]) -> PlacedRegion:

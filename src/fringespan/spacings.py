@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from fringespan.cautions import Caution
 from fringespan.micrograph import Micrograph
 
-__all__ = ["PairAngle", "Peak", "PeakOrigin", "Scale", "Spacings", "pair_angles", "spacings_of"]
+__all__ = ["PairAngle", "Peak", "PeakOrigin", "Scale", "Spacings", "diagonal_blocks", "pair_angles", "spacings_of"]
 
 PeakOrigin = Literal["found", "lattice point", "added by hand"]
 
@@ -113,6 +113,8 @@ class Scale:
     ----------
     geometry : ndarray, shape (2, 2), or None
         nm per pixel, as `Micrograph.geometry_nm_per_px`.
+    to_per_nm : ndarray, shape (2, 2)
+        Its inverse: a row vector in cycles per pixel times it is in 1/nm; the unit matrix without a pixel size.
     uncertainty : (float, float) or None
         Relative standard uncertainty along (row, column); None if not stated.
     common : bool
@@ -120,6 +122,7 @@ class Scale:
     """
 
     geometry: NDArray[np.float64] | None
+    to_per_nm: NDArray[np.float64]
     uncertainty: tuple[float, float] | None
     common: bool
 
@@ -127,11 +130,10 @@ class Scale:
     def of(cls, micrograph: Micrograph) -> Scale:
         """Return the scale of a picture."""
         stated = micrograph.pixel_size_relative_uncertainty
-        if stated is None:
-            return cls(micrograph.geometry_nm_per_px, None, True)
-        if isinstance(stated, tuple):
-            return cls(micrograph.geometry_nm_per_px, stated, False)
-        return cls(micrograph.geometry_nm_per_px, (stated, stated), True)
+        common = not isinstance(stated, tuple)
+        pair = stated if isinstance(stated, tuple) or stated is None else (stated, stated)
+        geometry = micrograph.geometry_nm_per_px
+        return cls(geometry, np.eye(2) if geometry is None else np.linalg.inv(geometry), pair, common)
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -197,7 +199,7 @@ def spacings_of(
     """
     flipped = (frequency[:, 1] < 0) | ((frequency[:, 1] == 0) & (frequency[:, 0] > 0))
     g_px = np.where(flipped[:, None], -frequency, frequency)
-    transform = np.eye(2) if scale.geometry is None else np.linalg.inv(scale.geometry)
+    transform = scale.to_per_nm
     g = g_px @ transform
     full = transform.T @ covariance @ transform
     length = np.sqrt((g * g).sum(axis=1))
@@ -227,6 +229,13 @@ def spacings_of(
         direction=np.degrees(np.arctan2(-g[:, 0], g[:, 1])) % 180.0,
         direction_uncertainty=np.degrees(np.sqrt(turned**2 + (crystal_across * relative) ** 2 + twist**2)),
     )
+
+
+def diagonal_blocks(covariance: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the covariance of each vector, shape (n, 2, 2), from that of all of them, shape (2n, 2n)."""
+    n = len(covariance) // 2
+    k = np.arange(n)
+    return covariance.reshape(n, 2, n, 2)[k, :, k, :]
 
 
 def _form(vector: NDArray[np.float64], matrix: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -259,7 +268,7 @@ def pair_angles(spacings: Spacings, joint_covariance: NDArray[np.float64], scale
     n = len(spacings.d)
     if n < 2:
         return ()
-    transform = np.eye(2) if scale.geometry is None else np.linalg.inv(scale.geometry)
+    transform = scale.to_per_nm
     g = spacings.g
     length = np.sqrt((g * g).sum(axis=1))
     unit = g / length[:, None]

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from fringespan.noise import RingBackground
 from fringespan.peaks.demodulation import demodulate
 from fringespan.peaks.detection import Candidates, density_at, detection_threshold, find_candidates, waves_removed
-from fringespan.peaks.joint_fit import JointFit, fit_jointly
+from fringespan.peaks.joint_fit import JointFit, fit_jointly, solve_waves
 from fringespan.peaks.misfit import MISFIT_LIMIT, CellResiduals, cell_residuals, split_wave
 from fringespan.region import Footprint
 from fringespan.spectrum import PowerSpectrum, RegionPixels
@@ -161,19 +161,42 @@ def _merged(
     limit: NDArray[np.float64],
     residuals: CellResiduals,
 ) -> tuple[JointFit, NDArray[np.float64], NDArray[np.float64], CellResiduals]:
-    """Keep the strongest of each group of near peaks that even together are no plane waves: one broken or bent fringe."""
-    distance = _distances(pixels.footprint, fit.frequency, fit.frequency)
-    stays = np.ones(len(density), bool)
-    for k in np.argsort(-fit.power_ratio):
-        if stays[k]:
-            near = (distance[k] < _PIECE_BINS) & (fit.power_ratio < fit.power_ratio[k])
-            if near.any() and (residuals.misfit[near].max() > MISFIT_LIMIT or residuals.misfit[k] > MISFIT_LIMIT):
-                stays &= ~near
+    """Make one peak of each group of near ones that even together are no plane waves: one broken or bent fringe.
+
+    It is put in the middle of the group, weighted by power, and stays there: a plane-wave fit would run to one side.
+    """
+    n = len(density)
+    near = _distances(pixels.footprint, fit.frequency, fit.frequency) < _PIECE_BINS
+    group = np.arange(n)
+    for j in range(n):
+        for k in range(j):
+            if near[j, k]:
+                group[group == group[j]] = group[k]
+    stays, frequency = np.ones(n, bool), fit.frequency.copy()
+    for label in np.unique(group):
+        members = np.flatnonzero(group == label)
+        if len(members) == 1 or residuals.misfit[members].max() <= MISFIT_LIMIT:
+            continue
+        strongest = members[fit.power_ratio[members].argmax()]
+        stays[members] = False
+        stays[strongest] = True
+        # opposite vectors are one and the same peak
+        sign = np.where(
+            np.hypot(*(frequency[members] - frequency[strongest]).T)
+            <= np.hypot(*(frequency[members] + frequency[strongest]).T),
+            1,
+            -1,
+        )
+        weight = fit.power_ratio[members] * sign
+        frequency[strongest] = weight @ fit.frequency[members] / np.abs(weight).sum()
     if stays.all():
         return fit, density, limit, residuals
-    fit, kept = fit_jointly(pixels, fit.demodulation.part(stays), density[stays], limit[stays])
-    density, limit = density[stays][kept], limit[stays][kept]
-    return fit, density, limit, cell_residuals(pixels.footprint, fit, density)
+    frequency, density, limit = frequency[stays], density[stays], limit[stays]
+    demodulation = demodulate(pixels, frequency)
+    amplitude, _, covariance = solve_waves(pixels.footprint, demodulation, density)
+    power_ratio = np.abs(amplitude) ** 2 * pixels.footprint.count / density
+    merged = JointFit(frequency, amplitude, covariance, power_ratio, demodulation)
+    return merged, density, limit, cell_residuals(pixels.footprint, merged, density)
 
 
 def _with_splits(
