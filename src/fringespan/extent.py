@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from fringespan.peaks.demodulation import Demodulation
 from fringespan.region import Footprint
+from fringespan.spectrum import cell_counts
 
 __all__ = ["FringeField", "crystal_footprint", "crystal_mask", "filled_part", "fringe_fields", "outline"]
 
@@ -45,9 +46,8 @@ class FringeField:
 
 @lru_cache(maxsize=16)
 def _block_counts(footprint: Footprint, size: int) -> NDArray[np.float64]:
-    mask = np.ones(footprint.shape, np.int8) if footprint.mask is None else footprint.mask.astype(np.int8)
-    edges = [np.arange(0, n, size) for n in footprint.shape]
-    return np.add.reduceat(np.add.reduceat(mask, edges[0], axis=0, dtype=float), edges[1], axis=1)
+    edges = [np.append(np.arange(0, n, size), n).astype(np.int32) for n in footprint.shape]
+    return np.asarray(cell_counts(footprint.spans, *edges))
 
 
 @numba.njit(cache=True, nogil=True)

@@ -19,7 +19,7 @@ from fringespan.spectrum import PowerSpectrum
 
 __all__ = ["RingBackground", "ring_background", "rings_at"]
 
-_SAMPLES = 160
+_SAMPLES = 144
 _INDEPENDENT_SHARE = 1.2
 """Independent samples per bin of a ring: the window makes neighbours alike (1 / 2.2), smoothing adds other rings (2.6)."""
 
@@ -64,48 +64,82 @@ def _rings(shape: tuple[int, int], aspect: float) -> _Rings:
     ny, nx = shape
     frequency_step = np.array([1 / ny, 1 / (nx * aspect)])
     step = frequency_step / frequency_step.max()
-    rows = np.where(np.arange(ny) <= ny // 2, np.arange(ny), np.arange(ny) - ny)
-    columns = np.arange(nx // 2 + 1)
-    radius = np.hypot(rows[:, None] * step[0], columns[None] * step[1])
-    # the axes carry scan-line noise and the leakage of edges, which the plane between them does not have
-    used = (np.abs(rows) > 1)[:, None] & (columns > 1)[None]
-    reach = min(step[0] * (ny // 2), step[1] * (nx // 2))
+    farthest = float(np.hypot(ny // 2 * step[0], nx // 2 * step[1]))
     edges = [2.5]
-    while edges[-1] < radius.max():
+    while edges[-1] < farthest:
         r = edges[-1]
-        # about twenty bins' worth of arc where there is so little, one unit in the middle, 1/256 of the radius far out
-        edges.append(r + max(1.0, min(20 / r, 0.35 * r), r / 256))
+        # about twenty bins' worth of arc where there is so little, one unit in the middle, 1/128 of the radius far out
+        edges.append(r + max(1.0, min(20 / r, 0.35 * r), r / 128))
     edge = np.array(edges)
-    ring = np.digitize(radius[used], edge) - 1
-    flat = np.flatnonzero(used.ravel())
-    random = np.random.default_rng(ny * 65537 + nx)
-    order = random.permutation(flat.size)
-    ring, flat = ring[order], flat[order]
-    order = np.argsort(ring, kind="stable")
-    ring, flat = ring[order], flat[order]
-    first = np.searchsorted(ring, np.arange(edge.size))
-    count = np.minimum(np.diff(first), _SAMPLES)
-    kept = np.flatnonzero(count >= 8)
-    samples = np.zeros((kept.size, _SAMPLES), np.int32)
-    middle = np.empty(kept.size)
-    for i, k in enumerate(kept):
-        # in the order of memory, so that the gathering reads ahead
-        chosen = np.sort(flat[first[k] : first[k] + count[k]])
-        samples[i, : chosen.size] = chosen
-        middle[i] = (edge[k] + edge[k + 1]) / 2
-    table = np.arange(int(radius.max() * _TABLE_STEPS) + 2 * _TABLE_STEPS) / _TABLE_STEPS
-    # corners hold few bins; beyond the inscribed circle the last well-sampled ring goes on
-    assert middle.size and reach > 0
-    position = np.interp(np.log(np.maximum(table, 0.5)), np.log(middle), np.arange(middle.size, dtype=float))
-    independent = _INDEPENDENT_SHARE * np.interp(position, np.arange(middle.size), count[kept])
+    samples = np.zeros((len(edges) - 1, _SAMPLES), np.int32)
+    counts = np.zeros(len(edges) - 1, np.int32)
+    _choose_samples(edge, ny, nx, step[0], step[1], samples, counts)
+    kept = counts >= 8
+    samples, counts = samples[kept], counts[kept]
+    middle = ((edge[:-1] + edge[1:]) / 2)[kept]
+    table = np.arange(int(farthest * _TABLE_STEPS) + 2 * _TABLE_STEPS) / _TABLE_STEPS
+    # corners hold few bins: beyond the last well-sampled ring its value goes on
+    position = np.interp(np.log(np.maximum(table, 0.5)), np.log(middle), np.arange(len(middle), dtype=float))
+    independent = _INDEPENDENT_SHARE * np.interp(position, np.arange(len(middle)), counts)
     return _Rings(
         middle,
         samples,
-        count[kept].astype(np.int32),
+        counts,
         position,
         independent.astype(np.float32),
         (float(step[0]), float(step[1])),
     )
+
+
+@numba.njit(cache=True, nogil=True)
+def _choose_samples(edges, ny, nx, step_y, step_x, samples, counts):  # type: ignore[no-untyped-def]
+    """Fill in distinct bins of each ring, as places in the flattened spectrum: all of a small ring's, else a random choice.
+
+    The axes carry scan-line noise and the leakage of edges, which the plane between them does not have: left out.
+    """
+    np.random.seed(ny * 65537 + nx)
+    width = nx // 2 + 1
+    most = samples.shape[1]
+    taken = np.zeros((ny, width), np.bool_)
+    # small rings: go through all bins near the origin
+    near = 24.0
+    last_row = min(int(near / step_y) + 1, (ny - 1) // 2)
+    last_column = min(int(near / step_x) + 1, nx // 2)
+    seen = np.zeros(counts.size, np.int64)
+    for i in range(-last_row, last_row + 1):
+        for j in range(2, last_column + 1):
+            radius = np.sqrt((i * step_y) ** 2 + (j * step_x) ** 2)
+            if abs(i) <= 1 or radius < edges[0] or radius >= near:
+                continue
+            k = np.searchsorted(edges, radius, side="right") - 1
+            if k >= counts.size or edges[k + 1] > near:
+                continue
+            # reservoir: each bin of the ring has the same chance to stay
+            seen[k] += 1
+            if counts[k] < most:
+                samples[k, counts[k]] = (i % ny) * width + j
+                counts[k] += 1
+            else:
+                place = np.random.randint(0, seen[k])
+                if place < most:
+                    samples[k, place] = (i % ny) * width + j
+    for k in range(counts.size):
+        inner, outer = edges[k], edges[k + 1]
+        if outer > near:
+            for _ in range(3 * most):
+                radius = np.sqrt(np.random.uniform(inner * inner, outer * outer))
+                angle = np.random.uniform(-np.pi / 2, np.pi / 2)
+                i = int(np.rint(radius * np.sin(angle) / step_y))
+                j = int(np.rint(radius * np.cos(angle) / step_x))
+                if abs(i) <= 1 or j <= 1 or abs(i) > (ny - 1) // 2 or j > nx // 2 or taken[i % ny, j]:
+                    continue
+                taken[i % ny, j] = True
+                samples[k, counts[k]] = (i % ny) * width + j
+                counts[k] += 1
+                if counts[k] == most:
+                    break
+        # in the order of memory, so that the gathering reads ahead
+        samples[k, : counts[k]] = np.sort(samples[k, : counts[k]])
 
 
 @numba.njit(cache=True, nogil=True)
@@ -172,7 +206,7 @@ def _ring_density(power, samples, counts, position, table):  # type: ignore[no-u
         if k == 0:
             centre = max(kth_smallest(values, values.size // 2) / np.float32(0.6931472), np.float32(1e-30))
         # from ring to ring the background changes little, so the last one is a guess that no peak has spoiled
-        centre = trimmed_mean(values, centre, 4)
+        centre = trimmed_mean(values, centre, 3)
         logs[k] = np.log(centre)
     # binomial means of three, first of neighbours, then of neighbours' neighbours, but not across the bend of a transfer
     # ring that stands out of the scatter

@@ -240,14 +240,17 @@ def _footprint(
     corners: tuple[tuple[float, float], ...], shape: tuple[int, int]
 ) -> tuple[Footprint, tuple[int, int], float] | None:
     """Return footprint, its offset in the rectangle of `shape`, and its smallest width; None if it holds no pixel."""
-    mask = _inside(np.array(corners), slice(0, shape[0]), slice(0, shape[1]))
-    used_rows, used_columns = np.flatnonzero(mask.any(axis=1)), np.flatnonzero(mask.any(axis=0))
-    if not used_rows.size:
+    spans = _inside(np.array(corners), shape)
+    if not len(spans):
         return None
-    top, bottom, left, right = used_rows[0], used_rows[-1] + 1, used_columns[0], used_columns[-1] + 1
-    mask = np.ascontiguousarray(mask[top:bottom, left:right])
+    top, left = int(spans[0, 0]), int(spans[:, 1].min())
+    rows, columns = int(spans[-1, 0]) + 1 - top, int(spans[:, 2].max()) - left
+    spans = (spans - (top, left, left)).astype(np.int32)
+    mask = np.zeros((rows, columns), bool)
+    for row, first, stop in spans.tolist():
+        mask[row, first:stop] = True
     mask.setflags(write=False)
-    return Footprint.from_mask(mask), (int(top), int(left)), _narrowest(mask)
+    return Footprint((rows, columns), mask, spans), (top, left), _narrowest(spans)
 
 
 def _is_upright_rectangle(corners: NDArray[np.float64]) -> bool:
@@ -258,36 +261,44 @@ def _is_upright_rectangle(corners: NDArray[np.float64]) -> bool:
     return bool((level.sum(axis=1) == 1).all() and (level[:, 0] == [level[0, 0], level[0, 1]] * 2).all())
 
 
-def _inside(corners: NDArray[np.float64], rows: slice, columns: slice) -> NDArray[np.bool_]:
-    """Rasterise by scan lines: a row is inside where it is inside just above or just below, so outlines count."""
-    height, width = rows.stop - rows.start, columns.stop - columns.start
+def _inside(corners: NDArray[np.float64], shape: tuple[int, int]) -> NDArray[np.int64]:
+    """Return the runs of pixels inside or on an outline as (row, first column, column after the last), by scan lines.
+
+    A pixel is inside where it is inside just above or just below its row, so that outlines along a row count.
+    """
+    height, width = shape
     start, end = corners, np.roll(corners, -1, axis=0)
     sloped = start[:, 0] != end[:, 0]
     start, end = start[sloped], end[sloped]
     top, bottom = np.minimum(start[:, 0], end[:, 0]), np.maximum(start[:, 0], end[:, 0])
     slope = (end[:, 1] - start[:, 1]) / (end[:, 0] - start[:, 0])
-    y = np.arange(rows.start, rows.stop)[:, None]
-    steps = np.zeros((height, width + 1), dtype=np.int32)
+    y = np.arange(height)[:, None]
+    runs = []
     for crossed in ((top <= y) & (y < bottom), (top < y) & (y <= bottom)):
         row, edge = np.nonzero(crossed)
         x = start[edge, 1] + slope[edge] * (y[row, 0] - start[edge, 0])
         order = np.lexsort((x, row))
         row, x = row[order], x[order]
-        first = np.ceil(x[0::2] - _ON_OUTLINE).astype(int) - columns.start
-        last = np.floor(x[1::2] + _ON_OUTLINE).astype(int) - columns.start + 1
-        first, last = np.clip(first, 0, width), np.clip(last, 0, width)
-        some = first < last
-        np.add.at(steps, (row[0::2][some], first[some]), 1)
-        np.add.at(steps, (row[0::2][some], last[some]), -1)
-    return cast("NDArray[np.bool_]", np.cumsum(steps, axis=1)[:, :-1] > 0)
+        first = np.clip(np.ceil(x[0::2] - _ON_OUTLINE).astype(np.int64), 0, width)
+        stop = np.clip(np.floor(x[1::2] + _ON_OUTLINE).astype(np.int64) + 1, 0, width)
+        runs.append(np.stack([row[0::2], first, stop], axis=1)[first < stop])
+    both = np.concatenate(runs)
+    both = both[np.lexsort((both[:, 1], both[:, 0]))]
+    if not len(both):
+        return both
+    # runs that overlap or touch become one: a run starts anew where it begins beyond all that ended before in its row
+    reach = np.maximum.accumulate(both[:, 0] * (width + 2) + both[:, 2])
+    begins = np.ones(len(both), bool)
+    begins[1:] = both[1:, 0] * (width + 2) + both[1:, 1] > reach[:-1]
+    last = np.append(np.flatnonzero(begins)[1:], len(both)) - 1
+    joined = both[begins]
+    joined[:, 2] = reach[last] - joined[:, 0] * (width + 2)
+    return joined
 
 
-def _narrowest(mask: NDArray[np.bool_]) -> float:
-    """Return the smallest width in pixels over all directions, from the end pixels of each row."""
-    row = np.flatnonzero(mask.any(axis=1))
-    first = mask[row].argmax(axis=1)
-    last = mask.shape[1] - 1 - mask[row, ::-1].argmax(axis=1)
-    ends = np.concatenate([np.stack([row, first], axis=1), np.stack([row, last], axis=1)])
+def _narrowest(spans: NDArray[np.int32]) -> float:
+    """Return the smallest width in pixels over all directions, from the ends of the runs."""
+    ends = np.concatenate([spans[:, :2], np.stack([spans[:, 0], spans[:, 2] - 1], axis=1)]).astype(float)
     angle = np.linspace(0, np.pi, 36, endpoint=False)
     along = ends @ np.stack([np.sin(angle), np.cos(angle)])
     # one pixel is added because a line of n pixel centres spans n - 1 steps

@@ -6,6 +6,7 @@ detection and the estimate of the noise; the positions of the peaks come from th
 
 from __future__ import annotations
 
+import threading
 from dataclasses import dataclass
 from functools import lru_cache
 
@@ -41,6 +42,10 @@ class Taper:
         Its factors along the two axes; all ones where `oblique` carries the window.
     oblique : ndarray of float32, shape (rows, columns), or None
         The window of a region that is no upright rectangle.
+    coarse : tuple of two ndarrays
+        Sums of an oblique window and of its square over blocks of a few pixels; empty for a rectangle.
+    coarse_y, coarse_x : ndarray
+        Middles of these blocks, in pixels from the first.
     power, total : float
         Sum of the squared window; sum of the window.
     transform_shape : (int, int)
@@ -50,6 +55,9 @@ class Taper:
     rows: NDArray[np.float32]
     columns: NDArray[np.float32]
     oblique: NDArray[np.float32] | None
+    coarse: tuple[NDArray[np.float64], NDArray[np.float64]]
+    coarse_y: NDArray[np.float64]
+    coarse_x: NDArray[np.float64]
     power: float
     total: float
     transform_shape: tuple[int, int]
@@ -117,27 +125,112 @@ def taper(footprint: Footprint) -> Taper:
         columns = np.kaiser(nx + 2, _KAISER_BETA)[1:-1]
         power = float((rows**2).sum() * (columns**2).sum())
         total = float(rows.sum() * columns.sum())
-        return Taper(rows.astype(np.float32), columns.astype(np.float32), None, power, total, transform_shape)
-    width = _OBLIQUE_TAPER * np.sqrt(footprint.count)
-    distance = edge_distance(footprint)
-    window = np.sin(np.minimum(distance / width, 1) * np.float32(np.pi / 2)) ** 2
+        none = np.empty((0, 0))
+        return Taper(
+            rows.astype(np.float32),
+            columns.astype(np.float32),
+            None,
+            (none, none),
+            np.empty(0),
+            np.empty(0),
+            power,
+            total,
+            transform_shape,
+        )
+    window, coarse, coarse_y, coarse_x = _oblique_window(footprint)
     ones = np.ones(ny, np.float32), np.ones(nx, np.float32)
-    power, total = float(np.vdot(window, window)), float(window.sum(dtype=np.float64))
-    return Taper(*ones, window, power, total, transform_shape)
+    power, total = float(coarse[1].sum()), float(coarse[0].sum())
+    return Taper(*ones, window, coarse, coarse_y, coarse_x, power, total, transform_shape)
 
 
-def edge_distance(footprint: Footprint) -> NDArray[np.float32]:
-    """Return each pixel's distance to the outline of an oblique footprint, in pixels; 0 outside."""
-    assert footprint.mask is not None
-    padded = np.pad(footprint.mask, 1)
-    # a third of the resolution is plenty for a window edge many pixels wide, and nine times faster
-    step = max(1, int(np.sqrt(footprint.count) / 256))
-    coarse = scipy.ndimage.distance_transform_edt(padded[::step, ::step]).astype(np.float32) * step
-    if step > 1:
-        coarse = np.repeat(np.repeat(coarse, step, axis=0), step, axis=1)[: padded.shape[0], : padded.shape[1]]
-        coarse = scipy.ndimage.uniform_filter(coarse, 2 * step - 1)
-    distance = coarse[1:-1, 1:-1] - 0.5
-    return np.where(footprint.mask, np.maximum(distance, 0.25), 0).astype(np.float32)
+def _oblique_window(
+    footprint: Footprint,
+) -> tuple[
+    NDArray[np.float32], tuple[NDArray[np.float64], NDArray[np.float64]], NDArray[np.float64], NDArray[np.float64]
+]:
+    """Return a window that rises as sin^2 from the outline inwards, and the sums of it and its square over blocks.
+
+    The distance to the outline is taken on a grid of some hundred points and interpolated: the window's edge is many
+    pixels wide, and its exact shape does not matter, only its smoothness.
+    """
+    ny, nx = footprint.shape
+    step = max(1, round(np.sqrt(footprint.count) / 160))
+    edges = [np.arange(0, n, step) for n in (ny, nx)]
+    filled = cell_counts(footprint.spans, *(np.append(e, n).astype(np.int32) for e, n in zip(edges, (ny, nx), strict=True)))
+    inside = np.pad(filled >= 0.5 * step * step, 1)
+    distance = (scipy.ndimage.distance_transform_edt(inside)[1:-1, 1:-1] - 0.5) * step
+    rise = np.clip(distance / (_OBLIQUE_TAPER * np.sqrt(footprint.count)), 0, 1)
+    window = np.zeros((ny, nx), np.float32)
+    sums, squares = np.zeros(filled.shape), np.zeros(filled.shape)
+    _interpolate_window((np.sin(np.pi / 2 * rise) ** 2).astype(np.float32), step, footprint.spans, window, sums, squares)
+    middle = [
+        e + (np.diff(np.append(e, n)) - 1) / 2 for e, n in zip(edges, (ny, nx), strict=True)
+    ]
+    return window, (sums, squares), middle[0], middle[1]
+
+
+@numba.njit(cache=True, nogil=True)
+def cell_counts(spans, edges_y, edges_x):  # type: ignore[no-untyped-def]
+    """Return how many pixels of some spans lie in each cell of a grid given by its pixel edges."""
+    counts = np.zeros((edges_y.size - 1, edges_x.size - 1))
+    cell = np.empty(edges_x[-1], np.int32)
+    for j in range(edges_x.size - 1):
+        cell[edges_x[j] : edges_x[j + 1]] = j
+    i = 0
+    for k in range(spans.shape[0]):
+        y, x0, x1 = spans[k, 0], spans[k, 1], spans[k, 2]
+        while y >= edges_y[i + 1]:
+            i += 1
+        for j in range(cell[x0], cell[x1 - 1] + 1):
+            counts[i, j] += min(x1, edges_x[j + 1]) - max(x0, edges_x[j])
+    return counts
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_FAST)
+def _interpolate_window(coarse, step, spans, window, sums, squares):  # type: ignore[no-untyped-def]
+    """Write the window, interpolated by Catmull-Rom cubics, at the pixels of the spans, and its sums over blocks."""
+    ny, nx = window.shape
+    height, width = coarse.shape
+    line = np.empty(width + 3, np.float32)
+    column = np.empty(nx, np.int32)
+    weights = np.empty((4, nx), np.float32)
+    for x in range(nx):
+        p = (x + 0.5) / step - 0.5
+        j = int(np.floor(p))
+        f = p - j
+        column[x] = j
+        weights[0, x] = -0.5 * f + f * f - 0.5 * f * f * f
+        weights[1, x] = 1 - 2.5 * f * f + 1.5 * f * f * f
+        weights[2, x] = 0.5 * f + 2 * f * f - 1.5 * f * f * f
+        weights[3, x] = -0.5 * f * f + 0.5 * f * f * f
+    for k in range(spans.shape[0]):
+        y, x0, x1 = spans[k, 0], spans[k, 1], spans[k, 2]
+        p = (y + 0.5) / step - 0.5
+        i = int(np.floor(p))
+        f = p - i
+        a = -0.5 * f + f * f - 0.5 * f * f * f
+        b = 1 - 2.5 * f * f + 1.5 * f * f * f
+        c = 0.5 * f + 2 * f * f - 1.5 * f * f * f
+        d = -0.5 * f * f + 0.5 * f * f * f
+        line[:] = np.float32(0)
+        for m in range(-1, 3):
+            row = i + m
+            # outside the grid the window is zero
+            if 0 <= row < height:
+                w = np.float32(a if m == -1 else (b if m == 0 else (c if m == 1 else d)))
+                for j in range(width):
+                    line[j + 1] += w * coarse[row, j]
+        for x in range(x0, x1):
+            j = column[x]
+            value = np.float32(0)
+            for m in range(4):
+                place = j + m
+                if 0 <= place < width + 2:
+                    value += weights[m, x] * line[place]
+            value = max(value, np.float32(0.002))
+            window[y, x] = value
+            sums[y // step, x // step] += value
+            squares[y // step, x // step] += value * value
 
 
 # --- the slow trend ------------------------------------------------------------------------------------------------
@@ -347,23 +440,26 @@ def _tapered(values, spans, trend, rows, columns, oblique, out):  # type: ignore
     next_row = 0
     for k in range(spans.shape[0]):
         y = spans[k, 0]
-        while next_row <= y:
+        x0, x1 = spans[k, 1], spans[k, 2]
+        while next_row < y:
             out[next_row, :] = np.float32(0)
+            next_row += 1
+        if next_row == y:
+            # the first run of its row clears what lies around it
+            out[y, :x0] = np.float32(0)
+            out[y, x1:] = np.float32(0)
             next_row += 1
         a, b, c, d = trend_row(trend, y, ny)
         wy = rows[y]
-        x0, x1 = spans[k, 1], spans[k, 2]
         source, target, wx, ts = values[y, x0:x1], out[y, x0:x1], columns[x0:x1], scaled[x0:x1]
+        if oblique.shape[0] == ny:
+            wx = oblique[y, x0:x1]
         below, above = low[x0:x1], high[x0:x1]
         for x in range(source.size):
             z = np.float32(source[x]) - (a + ts[x] * (b + ts[x] * (c + ts[x] * d)))
             below[x] = min(below[x], z)
             above[x] = max(above[x], z)
             target[x] = z * wy * wx[x]
-        if oblique.shape[0] == ny:
-            window = oblique[y, x0:x1]
-            for x in range(source.size):
-                target[x] *= window[x]
     out[next_row:, :] = np.float32(0)
     return low.min(), high.max()
 
@@ -388,6 +484,18 @@ def _power(transform, scale, power, block_maxima):  # type: ignore[no-untyped-de
             block_maxima[block, j] = m
 
 
+_memory = threading.local()
+
+
+def _scratch(shape: tuple[int, int]) -> NDArray[np.float32]:
+    """Return an array to be overwritten, the same one each time: fresh pages cost as much as filling them."""
+    held: NDArray[np.float32] | None = getattr(_memory, "padded", None)
+    if held is None or held.shape != shape:
+        held = np.empty(shape, np.float32)
+        _memory.padded = held
+    return held
+
+
 def power_spectrum(pixels: RegionPixels) -> tuple[PowerSpectrum, RegionPixels]:
     """Transform a region.
 
@@ -403,7 +511,7 @@ def power_spectrum(pixels: RegionPixels) -> tuple[PowerSpectrum, RegionPixels]:
     """
     window = taper(pixels.footprint)
     oblique = window.oblique if window.oblique is not None else np.empty((0, 0), np.float32)
-    padded = np.empty(window.transform_shape, np.float32)
+    padded = _scratch(window.transform_shape)
     arguments = window.rows, window.columns, oblique, padded
     low, high = _tapered(pixels.values, pixels.footprint.spans, pixels.trend, *arguments)
     transform = scipy.fft.rfft2(padded, workers=1)

@@ -131,15 +131,10 @@ def window_transform(
         rows = np.exp(2j * np.pi / transform_rows * np.outer(row_shift, y)) @ wy
         columns = np.exp(2j * np.pi / transform_columns * np.outer(column_shift, x)) @ wx
         return np.outer(rows, columns)
-    # over a few bins the window is smooth enough to be summed in blocks first
-    step = max(1, int(min(ny, nx) / 96))
-    edge_y, edge_x = np.arange(0, ny, step), np.arange(0, nx, step)
-    blocks = np.add.reduceat(np.add.reduceat(window.oblique.astype(float) ** power, edge_y, axis=0), edge_x, axis=1)
-    y = edge_y + (np.diff(np.append(edge_y, ny)) - 1) / 2
-    x = edge_x + (np.diff(np.append(edge_x, nx)) - 1) / 2
-    rows = np.exp(2j * np.pi / transform_rows * np.outer(row_shift, y))
-    columns = np.exp(2j * np.pi / transform_columns * np.outer(column_shift, x))
-    return np.asarray(rows @ blocks @ columns.T)
+    sums = window.coarse[power - 1]
+    rows = np.exp(2j * np.pi / transform_rows * np.outer(row_shift, window.coarse_y))
+    columns = np.exp(2j * np.pi / transform_columns * np.outer(column_shift, window.coarse_x))
+    return np.asarray((rows @ sums) @ columns.T)
 
 
 @lru_cache(maxsize=32)
@@ -364,8 +359,14 @@ def _search(  # type: ignore[no-untyped-def]
     score = np.empty(fine.shape[0])
     buffer = np.empty(512, np.float32)
     side = int(np.rint(np.sqrt(fine.shape[0])))
+    # the lowest background from a radius outwards refuses most blocks at a glance
+    deepest = table.copy()
+    for k in range(table.size - 2, -1, -1):
+        deepest[k] = min(deepest[k], deepest[k + 1])
     for by in range(block_maxima.shape[0]):
         for bx in range(block_maxima.shape[1]):
+            if block_maxima[by, bx] < first_threshold * deepest[radii[by, bx, 0]]:
+                continue
             lowest = table[radii[by, bx, 0]]
             for k in range(radii[by, bx, 0], min(radii[by, bx, 1] + 1, table.size)):
                 lowest = min(lowest, table[k])
@@ -590,7 +591,7 @@ def _window_response(footprint: Footprint) -> _WindowResponse:
         rows = grid.real / grid.real.max()
         grid = window_transform(footprint, np.zeros(1), shift, power=1)[0] * np.exp(-2j * np.pi * shift * middle[1])
         return _WindowResponse(rows, grid.real / grid.real.max() * window.total, np.empty((0, 0), complex), reach)
-    reach = 10
+    reach = 8
     shift = np.arange(-8 * (reach + 2), 8 * (reach + 2) + 1) / 8
     plane = window_transform(footprint, shift, shift, power=1)
     plane *= np.exp(-2j * np.pi * (shift[:, None] * middle[0] + shift[None] * middle[1]))

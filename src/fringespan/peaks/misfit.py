@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from fringespan.peaks.demodulation import block_size
 from fringespan.peaks.joint_fit import JointFit
 from fringespan.region import Footprint
+from fringespan.spectrum import cell_counts
 
 __all__ = ["MISFIT_LIMIT", "CellResiduals", "cell_residuals", "split_wave"]
 
@@ -72,8 +73,7 @@ def _cells(footprint: Footprint) -> _Cells:
         return np.minimum(np.linspace(0, blocks, cells + 1).round().astype(np.int32) * size, n).astype(np.int32)
 
     edges_y, edges_x = edges(ny), edges(nx)
-    mask = np.ones(footprint.shape, np.int8) if footprint.mask is None else footprint.mask.astype(np.int8)
-    counts = np.add.reduceat(np.add.reduceat(mask, edges_y[:-1], axis=0, dtype=float), edges_x[:-1], axis=1)
+    counts = cell_counts(footprint.spans, edges_y, edges_x)
     middle_y = (edges_y[:-1] + edges_y[1:] - 1) / 2 - (ny - 1) / 2
     middle_x = (edges_x[:-1] + edges_x[1:] - 1) / 2 - (nx - 1) / 2
     y, x = (middle_y / ny)[:, None], (middle_x / nx)[None]
