@@ -208,9 +208,7 @@ def _crystal(scene: _Scene, used: NDArray[np.bool_]) -> tuple[FringeField, NDArr
     fit = scene.fringes.fit
     strongest = np.flatnonzero(used)[np.argsort(-fit.power_ratio[used])][:8]
     width = smoothing_width_px(scene.footprint.count, fit.power_ratio, fit.frequency)[strongest]
-    fields = fringe_fields(
-        scene.footprint, fit.demodulation.part(strongest), fit.frequency[strongest], width
-    )
+    fields = fringe_fields(scene.footprint, fit.demodulation.part(strongest), fit.frequency[strongest], width)
     return fields, crystal_mask(fields, np.sqrt(fit.power_ratio[strongest]), 0.35)
 
 
@@ -225,7 +223,7 @@ def _missing(whole: _Scene, part: _Scene) -> NDArray[np.float64]:
     total = before.fit.frequency[:, None] + after.fit.frequency[None]
     distance = np.minimum(np.hypot(*(difference * bins).T), np.hypot(*(total * bins).T)).T
     # side lobes of the crystal's own peaks lie within some bins of them
-    return before.fit.frequency[strong & (distance.min(axis=1) > 6)]
+    return np.asarray(before.fit.frequency[strong & (distance.min(axis=1) > 6)])
 
 
 def _lattice(scene: _Scene, crystal: CrystalFit | None, size: NDArray[np.float64]) -> LatticeFit | None:
@@ -322,7 +320,9 @@ def _with_lattice_points(
     moved[new] = np.hypot(*((fit.frequency[new] - point[hopeful][kept[new] - len(fringes.density)]) * bins).T)
     stays = moved < 1.0
     if not stays.all():
-        fit, kept_again = fit_jointly(scene.pixels, fit.demodulation.part(stays), all_density[kept[stays]], all_limit[kept[stays]])
+        fit, kept_again = fit_jointly(
+            scene.pixels, fit.demodulation.part(stays), all_density[kept[stays]], all_limit[kept[stays]]
+        )
         kept, new = kept[stays][kept_again], new[stays][kept_again]
     misfit = np.ones(len(kept))
     misfit[~new] = fringes.residuals.misfit[kept[~new]]
@@ -403,7 +403,9 @@ def _assembled(
 def _crystal_fit(scene: _Scene, fields: FringeField, size: NDArray[np.float64]) -> CrystalFit:
     """Fit each peak over its own extent, lengths in nm (or pixels without a pixel size)."""
     fit = scene.fringes.fit
-    scaled = replace(fields, y=fields.y * size[0], x=fields.x * size[1], width_px=fields.width_px * np.sqrt(size.prod()))
+    scaled = replace(
+        fields, y=fields.y * size[0], x=fields.x * size[1], width_px=fields.width_px * np.sqrt(size.prod())
+    )
     return fit_crystal(scaled, fit.frequency / size, fit.power_ratio, scene.footprint.count * size.prod())
 
 
@@ -480,7 +482,7 @@ def _region_extent(footprint: Footprint, g: NDArray[np.float64], size: NDArray[n
     xx = (count * ((middle - x) ** 2 + (count**2 - 1) / 12)).sum() / total
     yx = (count * (row - y) * (middle - x)).sum() / total
     unit = g / np.hypot(*g.T)[:, None] * size
-    return np.sqrt(12 * (unit[:, 0] ** 2 * yy + unit[:, 1] ** 2 * xx + 2 * unit[:, 0] * unit[:, 1] * yx))
+    return np.asarray(np.sqrt(12 * (unit[:, 0] ** 2 * yy + unit[:, 1] ** 2 * xx + 2 * unit[:, 0] * unit[:, 1] * yx)))
 
 
 def _reordered(lattice: LatticeFit | None, order: NDArray[np.intp], size: NDArray[np.float64]) -> LatticeFit | None:

@@ -118,8 +118,8 @@ def fringe_fields(
     """
     size = demodulation.block
     counts = _block_counts(footprint, size).astype(np.complex128)
-    y = (np.arange(counts.shape[0]) + 0.5) * size - footprint.shape[0] / 2
-    x = (np.arange(counts.shape[1]) + 0.5) * size - footprint.shape[1] / 2
+    y = np.asarray((np.arange(counts.shape[0]) + 0.5) * size - footprint.shape[0] / 2, dtype=float)
+    x = np.asarray((np.arange(counts.shape[1]) + 0.5) * size - footprint.shape[1] / 2, dtype=float)
     shift = frequency - demodulation.frequency
     turn_y = np.exp(-2j * np.pi * np.outer(shift[:, 0], y))
     turn_x = np.exp(-2j * np.pi * np.outer(shift[:, 1], x))
@@ -228,8 +228,8 @@ def outline(fields: FringeField, mask: NDArray[np.bool_]) -> NDArray[np.float64]
     y = np.concatenate([[fields.y[0] - step_y], fields.y, [fields.y[-1] + step_y]])
     x = np.concatenate([[fields.x[0] - step_x], fields.x, [fields.x[-1] + step_x]])
     lines = contourpy.contour_generator(x, y, fine).lines(0.5)
-    longest = max(lines, key=len)
-    return np.asarray(longest[:-1, ::-1])
+    longest = max((np.asarray(line) for line in lines), key=lambda line: line.shape[0])
+    return np.asarray(longest[:-1, ::-1], dtype=float)
 
 
 def crystal_footprint(

@@ -291,12 +291,12 @@ def fit_crystal(
         share[k] = mask.sum() / fields.inside.sum()
         others = np.empty((3, 2))
         wide = filled_part(amplitude, fields.inside, 0.3)
-        _fit_shift(field, wide.astype(float), y, x, *shift[k], 0.0, others[0])
-        _fit_shift(field, mask.astype(float), y, x, *shift[k], 0.0, others[1])
+        _fit_shift(field, wide.astype(float), y, x, shift[k, 0], shift[k, 1], 0.0, others[0])
+        _fit_shift(field, mask.astype(float), y, x, shift[k, 0], shift[k, 1], 0.0, others[1])
         middle = (grid_y * mask).sum() / mask.sum(), (grid_x * mask).sum() / mask.sum()
         sigma = 0.2 * length[k]
         round_weight = np.exp(-((grid_y - middle[0]) ** 2 + (grid_x - middle[1]) ** 2) / (2 * sigma**2)) * mask
-        _fit_shift(field, round_weight, y, x, *shift[k], 0.0, others[2])
+        _fit_shift(field, round_weight, y, x, shift[k, 0], shift[k, 1], 0.0, others[2])
         spread[k] = np.sqrt((((others - shift[k]) @ unit) ** 2).mean()) * length[k]
         # noise of sum(w x y) / (A sum(w x^2)) against that of a wave of the mean amplitude over the whole region
         line = _along(weight, grid_y, grid_x, unit)

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import itertools
 from dataclasses import dataclass
 
 import numba
@@ -123,8 +122,7 @@ def find_lattice(
     if member.sum() < 3 or not _spans_plane(index, member):
         return None
     basis, normal, scatter = _weighted_fit(g, unit, sigma_along, sigma_across, index, member)
-    residual = g - index @ basis
-    along = (residual * unit).sum(axis=1)
+    along = np.asarray(((g - index @ basis) * unit).sum(axis=1), dtype=float)
     return LatticeFit(basis, np.linalg.inv(normal) * scatter**2, index, member, along, float(scatter))
 
 
@@ -403,7 +401,7 @@ def plane_lattice(
         reciprocal_uncertainty_per_px=sigma_px,
         reciprocal_per_nm=nm,
         reciprocal_uncertainty_per_nm=sigma_nm,
-        real_px=np.linalg.inv(px).T,
+        real_px=np.asarray(np.linalg.inv(px).T, dtype=float),
         real_nm=real_nm,
         lengths_nm=lengths,
         length_uncertainties_nm=length_sigma,

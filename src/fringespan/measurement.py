@@ -12,6 +12,14 @@ from fringespan.beam import Lens, scattering_angle_mrad, signed_delocalisation_n
 from fringespan.cautions import Caution, gravest_first
 from fringespan.crystal_fringes import CrystalFringes, DelocalisationLaw, find_crystal_fringes
 from fringespan.exceptions import RegionError
+from fringespan.judgement import (
+    LensEffects,
+    SpectrumSigns,
+    lens_effects,
+    peak_cautions,
+    region_cautions,
+    spectrum_signs,
+)
 from fringespan.lattice import PlaneLattice, combinations, plane_lattice
 from fringespan.micrograph import Micrograph
 from fringespan.region import PlacedRegion, Region, place_region
@@ -86,15 +94,19 @@ def measure(
     settings = settings or _DEFAULT
     region = region or Region.whole(micrograph.shape)
     placed = place_region(region, micrograph.shape)
-    pixels = prepare_pixels(micrograph.crop(placed.rows, placed.columns), placed.footprint)
+    values = micrograph.crop(placed.rows, placed.columns)
+    pixels = prepare_pixels(values, placed.footprint)
     spectrum, pixels = power_spectrum(pixels)
     if pixels.sigma == 0:
-        raise RegionError(f"region {region.name!r}: all its pixels are equal; draw it where the picture shows something")
-    found = find_crystal_fringes(
-        pixels, spectrum, settings, micrograph.pixel_size_nm or (1.0, 1.0), _delocalisation(micrograph)
-    )
+        raise RegionError(
+            f"region {region.name!r}: all its pixels are equal; draw it where the picture shows something"
+        )
+    lens = _lens(micrograph)
+    law = None if lens is None else _delocalisation(lens)
+    found = find_crystal_fringes(pixels, spectrum, settings, micrograph.pixel_size_nm or (1.0, 1.0), law)
     scale = Scale.of(micrograph)
-    peaks, angles = _peaks(micrograph, placed, pixels, found, scale)
+    signs = spectrum_signs(spectrum)
+    peaks, angles, effects = _peaks(micrograph, placed, pixels, found, scale, signs, lens)
     lattice = None
     if found.lattice is not None:
         lattice = plane_lattice(found.lattice, found.lattice_relative, scale.geometry)
@@ -109,25 +121,41 @@ def measure(
         crystal_outline_px=None if found.outline is None else found.outline + corner,
         crystal_extent_nm=found.extent if scale.geometry is not None else None,
         spectrum=spectrum,
-        cautions=gravest_first([*micrograph.cautions, *placed.cautions]),
+        cautions=gravest_first(
+            [
+                *micrograph.cautions,
+                *placed.cautions,
+                *region_cautions(micrograph, settings, values, pixels, spectrum, signs, found, peaks, lens, effects),
+            ]
+        ),
     )
 
 
-def _delocalisation(micrograph: Micrograph) -> DelocalisationLaw | None:
-    """Return the signed delocalisation as a function of g, where the lens and the pixel size are known."""
+def _lens(micrograph: Micrograph) -> Lens | None:
+    """Return the lens, where it and the pixel size are known."""
     voltage, cs, defocus = micrograph.voltage_kv, micrograph.cs_mm, micrograph.defocus_nm
     if voltage is None or cs is None or defocus is None or micrograph.pixel_size_nm is None:
         return None
-    lens = Lens(voltage_kv=voltage, cs_mm=cs, defocus_nm=defocus)
+    return Lens(voltage_kv=voltage, cs_mm=cs, defocus_nm=defocus)
+
+
+def _delocalisation(lens: Lens) -> DelocalisationLaw:
+    """Return the signed delocalisation as a function of g."""
     return lambda g_per_nm: np.asarray(signed_delocalisation_nm(g_per_nm, lens))
 
 
 def _peaks(
-    micrograph: Micrograph, placed: PlacedRegion, pixels: RegionPixels, found: CrystalFringes, scale: Scale
-) -> tuple[tuple[Peak, ...], tuple[PairAngle, ...]]:
+    micrograph: Micrograph,
+    placed: PlacedRegion,
+    pixels: RegionPixels,
+    found: CrystalFringes,
+    scale: Scale,
+    signs: SpectrumSigns,
+    lens: Lens | None,
+) -> tuple[tuple[Peak, ...], tuple[PairAngle, ...], LensEffects | None]:
     n = len(found.power_ratio)
     if n == 0:
-        return (), ()
+        return (), (), None
     blocks = diagonal_blocks(found.covariance)
     spacings = spacings_of(found.frequency, blocks, found.crystal_along, found.crystal_across, scale)
     angles = pair_angles(spacings, found.covariance, scale, found.crystal_across)
@@ -155,6 +183,18 @@ def _peaks(
         from_lattice = spacings_of(exact, blocks, found.lattice_along, found.lattice_along, scale)
         d_lattice = from_lattice.d
         u_lattice = np.sqrt(from_lattice.crystal**2 + np.nan_to_num(from_lattice.scale) ** 2)
+    effects = None if lens is None else lens_effects((1 / spacings.d).tolist(), lens)
+    cautions = peak_cautions(
+        found,
+        combined,
+        d_nm=spacings.d.tolist() if in_nm else None,
+        shape=placed.footprint.shape,
+        signs=signs,
+        is_jpeg=any(caution.code == "jpeg-compression" for caution in micrograph.cautions),
+        voltage_kv=micrograph.voltage_kv,
+        cs_mm=micrograph.cs_mm,
+        effects=effects,
+    )
     peaks = []
     for k in range(n):
         gives_d = in_nm and found.withheld[k] is None
@@ -183,7 +223,7 @@ def _peaks(
                 combination_of=combined[k],
                 origin="lattice point" if found.at_lattice_point[k] else "found",
                 withheld=found.withheld[k],
-                cautions=(),
+                cautions=cautions[k],
             )
         )
-    return tuple(peaks), angles
+    return tuple(peaks), angles, effects

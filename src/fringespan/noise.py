@@ -73,7 +73,7 @@ def _rings(shape: tuple[int, int], aspect: float) -> _Rings:
     edge = np.array(edges)
     samples = np.zeros((len(edges) - 1, _SAMPLES), np.int32)
     counts = np.zeros(len(edges) - 1, np.int32)
-    _choose_samples(edge, ny, nx, step[0], step[1], samples, counts)
+    _choose_samples(np.random.default_rng(ny * 65537 + nx), edge, ny, nx, step[0], step[1], samples, counts)
     kept = counts >= 8
     samples, counts = samples[kept], counts[kept]
     middle = ((edge[:-1] + edge[1:]) / 2)[kept]
@@ -92,12 +92,11 @@ def _rings(shape: tuple[int, int], aspect: float) -> _Rings:
 
 
 @numba.njit(cache=True, nogil=True)
-def _choose_samples(edges, ny, nx, step_y, step_x, samples, counts):  # type: ignore[no-untyped-def]
+def _choose_samples(random, edges, ny, nx, step_y, step_x, samples, counts):  # type: ignore[no-untyped-def]
     """Fill in distinct bins of each ring, as places in the flattened spectrum: all of a small ring's, else a random choice.
 
     The axes carry scan-line noise and the leakage of edges, which the plane between them does not have: left out.
     """
-    np.random.seed(ny * 65537 + nx)
     width = nx // 2 + 1
     most = samples.shape[1]
     taken = np.zeros((ny, width), np.bool_)
@@ -120,15 +119,15 @@ def _choose_samples(edges, ny, nx, step_y, step_x, samples, counts):  # type: ig
                 samples[k, counts[k]] = (i % ny) * width + j
                 counts[k] += 1
             else:
-                place = np.random.randint(0, seen[k])
+                place = random.integers(0, seen[k])
                 if place < most:
                     samples[k, place] = (i % ny) * width + j
     for k in range(counts.size):
         inner, outer = edges[k], edges[k + 1]
         if outer > near:
             for _ in range(3 * most):
-                radius = np.sqrt(np.random.uniform(inner * inner, outer * outer))
-                angle = np.random.uniform(-np.pi / 2, np.pi / 2)
+                radius = np.sqrt(random.uniform(inner * inner, outer * outer))
+                angle = random.uniform(-np.pi / 2, np.pi / 2)
                 i = int(np.rint(radius * np.sin(angle) / step_y))
                 j = int(np.rint(radius * np.cos(angle) / step_x))
                 if abs(i) <= 1 or j <= 1 or abs(i) > (ny - 1) // 2 or j > nx // 2 or taken[i % ny, j]:

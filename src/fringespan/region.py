@@ -214,7 +214,7 @@ def place_region(region: Region, picture_shape: tuple[int, int]) -> PlacedRegion
             "direction to tell fringes from noise; draw it larger"
         )
     top, left = first[0] + offset[0], first[1] + offset[1]
-    cautions = ()
+    cautions: tuple[Caution, ...] = ()
     if clipped:
         cautions = (
             Caution(
@@ -240,12 +240,12 @@ def _footprint(
     corners: tuple[tuple[float, float], ...], shape: tuple[int, int]
 ) -> tuple[Footprint, tuple[int, int], float] | None:
     """Return footprint, its offset in the rectangle of `shape`, and its smallest width; None if it holds no pixel."""
-    spans = _inside(np.array(corners), shape)
-    if not len(spans):
+    runs = _inside(np.array(corners), shape)
+    if not len(runs):
         return None
-    top, left = int(spans[0, 0]), int(spans[:, 1].min())
-    rows, columns = int(spans[-1, 0]) + 1 - top, int(spans[:, 2].max()) - left
-    spans = (spans - (top, left, left)).astype(np.int32)
+    top, left = int(runs[0, 0]), int(runs[:, 1].min())
+    rows, columns = int(runs[-1, 0]) + 1 - top, int(runs[:, 2].max()) - left
+    spans = (runs - (top, left, left)).astype(np.int32)
     mask = np.zeros((rows, columns), bool)
     for row, first, stop in spans.tolist():
         mask[row, first:stop] = True

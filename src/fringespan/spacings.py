@@ -133,7 +133,8 @@ class Scale:
         common = not isinstance(stated, tuple)
         pair = stated if isinstance(stated, tuple) or stated is None else (stated, stated)
         geometry = micrograph.geometry_nm_per_px
-        return cls(geometry, np.eye(2) if geometry is None else np.linalg.inv(geometry), pair, common)
+        to_per_nm = np.asarray(np.eye(2) if geometry is None else np.linalg.inv(geometry), dtype=float)
+        return cls(geometry, to_per_nm, pair, common)
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -241,13 +242,12 @@ def diagonal_blocks(covariance: NDArray[np.float64]) -> NDArray[np.float64]:
 def _form(vector: NDArray[np.float64], matrix: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return v C v for each row, never below 0."""
     y, x = vector[:, 0], vector[:, 1]
-    return np.asarray(
-        np.maximum(y * y * matrix[:, 0, 0] + 2 * y * x * matrix[:, 0, 1] + x * x * matrix[:, 1, 1], 0.0)
-    )
+    return np.asarray(np.maximum(y * y * matrix[:, 0, 0] + 2 * y * x * matrix[:, 0, 1] + x * x * matrix[:, 1, 1], 0.0))
 
 
-def pair_angles(spacings: Spacings, joint_covariance: NDArray[np.float64], scale: Scale,
-                crystal_across: NDArray[np.float64]) -> tuple[PairAngle, ...]:
+def pair_angles(
+    spacings: Spacings, joint_covariance: NDArray[np.float64], scale: Scale, crystal_across: NDArray[np.float64]
+) -> tuple[PairAngle, ...]:
     """Return the angle between every pair of vectors, with its standard uncertainty.
 
     Parameters

@@ -156,16 +156,18 @@ def _oblique_window(
     ny, nx = footprint.shape
     step = max(1, round(np.sqrt(footprint.count) / 160))
     edges = [np.arange(0, n, step) for n in (ny, nx)]
-    filled = cell_counts(footprint.spans, *(np.append(e, n).astype(np.int32) for e, n in zip(edges, (ny, nx), strict=True)))
+    filled = cell_counts(
+        footprint.spans, *(np.append(e, n).astype(np.int32) for e, n in zip(edges, (ny, nx), strict=True))
+    )
     inside = np.pad(filled >= 0.5 * step * step, 1)
     distance = (scipy.ndimage.distance_transform_edt(inside)[1:-1, 1:-1] - 0.5) * step
     rise = np.clip(distance / (_OBLIQUE_TAPER * np.sqrt(footprint.count)), 0, 1)
     window = np.zeros((ny, nx), np.float32)
     sums, squares = np.zeros(filled.shape), np.zeros(filled.shape)
-    _interpolate_window((np.sin(np.pi / 2 * rise) ** 2).astype(np.float32), step, footprint.spans, window, sums, squares)
-    middle = [
-        e + (np.diff(np.append(e, n)) - 1) / 2 for e, n in zip(edges, (ny, nx), strict=True)
-    ]
+    _interpolate_window(
+        (np.sin(np.pi / 2 * rise) ** 2).astype(np.float32), step, footprint.spans, window, sums, squares
+    )
+    middle = [e + (np.diff(np.append(e, n)) - 1) / 2 for e, n in zip(edges, (ny, nx), strict=True)]
     return window, (sums, squares), middle[0], middle[1]
 
 
@@ -401,7 +403,7 @@ def _saturation_level(values: NDArray[np.generic], good: NDArray[np.bool_]) -> f
     if not good.any():
         return None
     top = float(values[good].max())
-    if values.dtype.kind in "ui" and top == np.iinfo(values.dtype).max:
+    if values.dtype.kind in "ui" and top == _highest(values.dtype):
         return top
     # a saturated picture that was scaled afterwards has many pixels at exactly one value, its highest
     at_top = np.count_nonzero(values[good] == values[good].max())
@@ -409,6 +411,11 @@ def _saturation_level(values: NDArray[np.generic], good: NDArray[np.bool_]) -> f
     if distinct > 256 and at_top > max(8, 2e-4 * good.sum()):
         return top
     return None
+
+
+def _highest(kind: np.dtype[np.generic]) -> int:
+    """Return the highest value of an integer type."""
+    return int(2 ** (8 * kind.itemsize - (1 if kind.kind == "i" else 0)) - 1)
 
 
 def trend_surface(trend: NDArray[np.float64], shape: tuple[int, int]) -> NDArray[np.float64]:
@@ -533,4 +540,4 @@ def _within_range(pixels: RegionPixels, low: float, high: float) -> bool:
         return False
     kind = pixels.values.dtype
     highest = pixels.trend[0] + high + np.abs(pixels.trend[1:]).sum()
-    return not (kind.kind in "ui" and kind.itemsize <= 2 and highest >= np.iinfo(kind).max)
+    return not (kind.kind in "ui" and kind.itemsize <= 2 and highest >= _highest(kind))

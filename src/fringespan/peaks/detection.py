@@ -21,7 +21,7 @@ from fringespan.noise import RingBackground, kth_smallest, trimmed_mean
 from fringespan.region import Footprint
 from fringespan.spectrum import PowerSpectrum, taper
 
-__all__ = ["Candidates", "detection_threshold", "density_at", "find_candidates", "matched_ratio_at", "waves_removed"]
+__all__ = ["Candidates", "density_at", "detection_threshold", "find_candidates", "matched_ratio_at", "waves_removed"]
 
 _FIRST_PASS = 0.36
 """Share of the detection threshold that a bin alone must reach over the rings; a tapered bin between two sees a third."""
@@ -90,7 +90,6 @@ class _MatchedFilter:
 @lru_cache(maxsize=32)
 def _matched_filter(footprint: Footprint) -> _MatchedFilter:
     """Return filters h with T = |h^H z|^2 / S for the 7 x 7 bins z around a maximum, one row per sub-bin offset."""
-    window = taper(footprint)
     bins = np.arange(-3, 4)
 
     def responses(offsets: NDArray[np.float64]) -> NDArray[np.complex128]:
@@ -99,7 +98,7 @@ def _matched_filter(footprint: Footprint) -> _MatchedFilter:
         n = offsets.size
         return grid.reshape(n, 7, n, 7).transpose(0, 2, 1, 3).reshape(n * n, 49)
 
-    lags = np.arange(-6, 7)
+    lags = np.arange(-6, 7).astype(float)
     lag = window_transform(footprint, -lags, -lags, power=2)
     row, column = np.divmod(np.arange(49), 7)
     covariance = lag[row[:, None] - row[None] + 6, column[:, None] - column[None] + 6]
@@ -510,9 +509,7 @@ def matched_ratio_at(
     ndarray, shape (n,)
     """
     out = np.empty(len(frequency))
-    _filter_at(
-        spectrum.transform, spectrum.shape[1], frequency * spectrum.shape, _matched_filter(footprint).fine, out
-    )
+    _filter_at(spectrum.transform, spectrum.shape[1], frequency * spectrum.shape, _matched_filter(footprint).fine, out)
     return out
 
 

@@ -147,7 +147,7 @@ def _without_pieces(
         return fit, density, limit
     distance = _distances(pixels.footprint, fit.frequency, fit.frequency)
     weaker = fit.power_ratio[:, None] < _PIECE_RATIO * fit.power_ratio[None]
-    pieces = ((distance < _PIECE_BINS) & weaker).any(axis=1)
+    pieces = np.asarray(((distance < _PIECE_BINS) & weaker).any(axis=1))
     if not pieces.any():
         return fit, density, limit
     fit, kept = fit_jointly(pixels, fit.demodulation.part(~pieces), density[~pieces], limit[~pieces])
