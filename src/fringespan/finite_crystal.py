@@ -394,7 +394,7 @@ def crystal_uncertainty(
 
     Notes
     -----
-    Without a lattice kappa^2 = 0.003^2 + (phi / 2)^2 + (p / 4)^2. With one, kappa^2 = 0.002^2 + (1.5 kappa_lattice)^2 +
+    Without a lattice kappa^2 = 0.003^2 + (phi / 2)^2 + (p / 4)^2. With one, kappa^2 = 0.002^2 + (1.2 kappa_lattice)^2 +
     (0.15 p)^2 + (0.2 phi)^2, where kappa_lattice^2 is the scatter of the residuals less the noise's share.
     """
     phi, p = crystal.phase_rms, crystal.plateau_loss
@@ -405,7 +405,7 @@ def crystal_uncertainty(
     scatter = lattice_scatter(
         lattice_residual_cycles[on_lattice], noise_cycles[on_lattice], lattice_tolerance(phi, p)[on_lattice]
     )
-    along = np.sqrt(0.002**2 + (1.5 * scatter) ** 2 + (0.15 * p) ** 2 + (0.2 * phi) ** 2)
+    along = np.sqrt(0.002**2 + (1.2 * scatter) ** 2 + (0.15 * p) ** 2 + (0.2 * phi) ** 2)
     if delocalisation_nm is not None:
         along = along * np.sqrt(0.6**2 + (1.1 * np.minimum(np.abs(delocalisation_nm), 1.0)) ** 2)
     lattice = float(np.sqrt((0.25 * np.median(p[on_lattice])) ** 2 + 0.0015**2))

@@ -191,7 +191,7 @@ def cell_counts(spans, edges_y, edges_x):  # type: ignore[no-untyped-def]
 @numba.njit(cache=True, nogil=True, fastmath=_FAST)
 def _interpolate_window(coarse, step, spans, window, sums, squares):  # type: ignore[no-untyped-def]
     """Write the window, interpolated by Catmull-Rom cubics, at the pixels of the spans, and its sums over blocks."""
-    ny, nx = window.shape
+    nx = window.shape[1]
     height, width = coarse.shape
     line = np.empty(width + 3, np.float32)
     column = np.empty(nx, np.int32)

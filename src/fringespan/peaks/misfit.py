@@ -1,4 +1,4 @@
-"""Misfit: does a single plane wave describe the fringes of a peak over the whole region?
+"""Misfit: whether a single plane wave describes the fringes of a peak over the whole region.
 
 What the fitted waves leave over is projected, cell by cell, on polynomials of second to fourth order across the region.
 Noise alone leaves its own density there; an envelope, a bend or a second wave close by leaves more.
