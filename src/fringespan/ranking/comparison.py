@@ -39,9 +39,9 @@ picture outnumber reflections. The others are given indices, but don't count."""
 
 _FALSE_GROWTH = 0.6
 _MOST_FALSE = 0.35
-_EVEN_SHARES = (0.03, 0.5)
+_EVEN_SHARES = (0.15, 0.5)
 _EVEN_STRENGTHS = (0.5, 0.1)
-"""Of peaks half as strong as the strongest 3 % were picked regardless of intensity (beyond what the weights say), of
+"""Of peaks half as strong as the strongest 15 % were picked regardless of intensity (beyond what the weights say), of
 those a tenth as strong one half."""
 
 _POPULATION = 30
@@ -127,8 +127,9 @@ def evidence_peaks(observation: Observation) -> NDArray[np.int64]:
     order = np.argsort(-strength, kind="stable")
     order = order[is_trusted[order]]
     if not len(order):
-        return order
-    return order[strength[order] >= LEAST_STRENGTH * strength[order[0]]][:MOST_EVIDENCE]
+        return np.zeros(0, dtype=np.int64)
+    is_strong = strength[order] >= LEAST_STRENGTH * strength[order[0]]
+    return np.asarray(order[is_strong][:MOST_EVIDENCE], dtype=np.int64)
 
 
 def _shares(

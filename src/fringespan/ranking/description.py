@@ -69,15 +69,16 @@ def described(comparison: Comparison, observation: Observation, most: int) -> tu
     node[:, comparison.peaks] = comparison.node[chosen]
     is_open = np.ones(len(q), dtype=bool)
     is_open[comparison.peaks] = False
-    orientation = comparison.zone[chosen], comparison.turn[chosen], comparison.distortion[chosen]
+    zone_of, turn, distortion = comparison.zone[chosen], comparison.turn[chosen], comparison.distortion[chosen]
     nets = tables.inverse_basis, tables.grid, tables.grid_first, tables.grid_reach
     reflections = tables.first, tables.g, tables.length, tables.weight
+    longest = comparison.longest_per_nm
     pull, missing, rotation = _facts(
-        *orientation, node, is_open, q, covariance, comparison.longest_per_nm, *reflections, tables.kind, *nets
+        zone_of, turn, distortion, node, is_open, q, covariance, longest, *reflections, tables.kind, *nets
     )
     compared = min(_MOST_COMPARED, int(np.count_nonzero(summed[order] > _LIKELY * summed.max(initial=0.0))))
     tolerance = 2 * math.sqrt(float(np.median((comparison.covariance[:, 0] + comparison.covariance[:, 2]) / 2)))
-    alike = _alike(*(v[:compared] for v in orientation), comparison.longest_per_nm, tolerance, *reflections, *nets)
+    alike = _alike(zone_of[:compared], turn[:compared], distortion[:compared], longest, tolerance, *reflections, *nets)
     members = (comparison.node[chosen] >= 0) & comparison.is_independent
     dof = np.maximum(2 * members.sum(axis=1) - 1, 1)
     power = np.where(comparison.is_independent, comparison.strength**2, 0.0)

@@ -28,6 +28,7 @@ Shared = Literal["phase", "scale"]
 _CREDIBLE = 0.95
 _SECOND_CRYSTAL_PRIOR = 0.05
 _SECOND_CRYSTAL_ODDS = 20.0
+_SECOND_SCALE = 1e-4
 _GRID = 2001
 _NOT_AT_ALL = -80.0
 
@@ -184,8 +185,7 @@ def _second_crystal(
     number = int(left.sum())
     if number < 2:
         return None
-    scale = (matches[0].scale or 1.0) - 1, math.hypot(matches[0].scale_uncertainty or 0.0, 1e-4)
-    rest = compare(observation, phases, settings, only=comparison.peaks[left], scale=scale)
+    rest = compare(observation, phases, settings, only=comparison.peaks[left], scale=_scale_by_all(comparison))
     if rest is None or not len(rest.zone):
         return None
     # as noise, each peak left over costs what the evidence of any hypothesis charges for it
@@ -202,6 +202,15 @@ def _second_crystal(
         if found.phase != matches[0].phase and not is_strong:
             return None
     return found
+
+
+def _scale_by_all(comparison: Comparison) -> tuple[float, float]:
+    """Return what all hypotheses together say about the scale: e0 and its standard deviation."""
+    share = np.exp(comparison.log_evidence - comparison.log_evidence.max())
+    share /= share.sum()
+    offset = comparison.distortion[:, 0]
+    mean = float(share @ offset)
+    return mean, math.sqrt(float(share @ ((offset - mean) ** 2 + comparison.scale_sigma**2)) + _SECOND_SCALE**2)
 
 
 def _scale_likelihood(comparison: Comparison, own_part: NDArray[np.float64]) -> tuple[NDArray[np.float64], ...]:

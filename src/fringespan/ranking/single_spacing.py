@@ -45,7 +45,8 @@ def candidates_by_spacing(
             found.append((phase, common, *best))
     if not found:
         return ()
-    share = np.exp(np.array([log_evidence for _, _, log_evidence, _, _ in found]))
+    evidence = np.array([log_evidence for _, _, log_evidence, _, _ in found])
+    share = np.exp(evidence - evidence.max())
     share /= share.sum()
     result = []
     for index in np.argsort(-share, kind="stable")[: settings.most_matches]:

@@ -205,8 +205,8 @@ def cautions_of(
                 Caution(
                     "ranking-thin-crystal",
                     "note",
-                    f"Some peaks are reflections that {best.structure.name}'s centring forbids; crystals of a few layers "
-                    "show them.",
+                    f"Some peaks are reflections that {best.structure.name}'s centring forbids; crystals of a few "
+                    "layers show them.",
                     "Check the thickness; in a thick crystal they speak against the phase.",
                 )
             )

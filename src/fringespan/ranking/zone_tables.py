@@ -35,7 +35,7 @@ __all__ = [
 CACHE_FOLDER_VARIABLE = "FRINGESPAN_CACHE"
 """Environment variable that names another folder for tables kept on disk."""
 
-TABLE_D_MIN_NM = 0.08
+TABLE_D_MIN_NM = 0.07
 """Finest spacing in the tables; finer peaks take no part in a ranking."""
 
 LARGEST_ZONE_INDEX = 4
@@ -182,7 +182,7 @@ def _content_name(phases: Sequence[Phase]) -> str:
 
 def _read(path: Path) -> ZoneTables | None:
     try:
-        with np.load(path, allow_pickle=False) as stored:
+        with path.open("rb") as file, np.load(file, allow_pickle=False) as stored:
             return ZoneTables(**{field.name: stored[field.name] for field in fields(ZoneTables)})
     except (OSError, KeyError, ValueError, EOFError, zipfile.BadZipFile):
         return None  # missing or damaged: it is built anew
