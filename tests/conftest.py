@@ -6,6 +6,7 @@ import dataclasses
 import math
 from collections.abc import Callable
 
+import hypothesis
 import numpy as np
 import pytest
 
@@ -17,6 +18,10 @@ from fringespan.region import Region
 from fringespan.settings import MeasurementSettings
 from fringespan.spacings import PairAngle, Peak
 from fringespan.spectrum import PowerSpectrum
+
+# the same examples in every run, on however slow a machine
+hypothesis.settings.register_profile("repeatable", derandomize=True, deadline=None)
+hypothesis.settings.load_profile("repeatable")
 
 FEW_FRINGES = Caution("few-fringes", "warning", "Only 6 fringes lie in the region.", "Draw it larger.")
 

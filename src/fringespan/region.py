@@ -31,6 +31,7 @@ SMALLEST_WIDTH_PX = 24
 
 _ELLIPSE_CORNERS = 180
 _ON_OUTLINE = 1e-9
+_FARTHEST_PX = 1e9
 
 
 @dataclass(frozen=True)
@@ -50,7 +51,7 @@ class Region:
     Raises
     ------
     RegionError
-        If the outline has fewer than three corners, a corner that is not finite, no area, or crosses itself.
+        If the outline has fewer than three corners, a corner that is not finite, no area, or crosses or touches itself.
     """
 
     name: str
@@ -67,14 +68,16 @@ class Region:
                 f"region {self.name!r}: an outline needs at least three (row, column) corners, got an array of shape "
                 f"{corners.shape}"
             )
-        if not np.isfinite(corners).all():
-            raise RegionError(f"region {self.name!r}: every corner must be finite; draw it again")
+        if not (np.abs(corners) < _FARTHEST_PX).all():
+            raise RegionError(
+                f"region {self.name!r}: every corner must be finite and within {_FARTHEST_PX:g} px; draw it again"
+            )
         if self.kind not in get_args(RegionKind):
             raise RegionError(f"region {self.name!r}: kind must be one of {get_args(RegionKind)}, got {self.kind!r}")
         object.__setattr__(self, "name", str(self.name))
         object.__setattr__(self, "vertices_px", tuple((float(r), float(c)) for r, c in corners))
-        if self.kind in ("polygon",) and _crosses_itself(corners):
-            raise RegionError(f"region {self.name!r}: its outline crosses itself; draw it without a crossing")
+        if _crosses_itself(corners):
+            raise RegionError(f"region {self.name!r}: its outline crosses or touches itself; draw it so that it does not")
         if _area(corners) <= 0:
             raise RegionError(f"region {self.name!r}: its outline encloses no area; draw it again")
 
@@ -312,22 +315,41 @@ def _area(corners: NDArray[np.float64]) -> float:
 
 def _crosses_itself(corners: NDArray[np.float64]) -> bool:
     """Say whether two edges that are not neighbours touch or cross."""
+    # a corner clicked twice, or repeated to close the outline, makes no edge
+    corners = corners[(corners != np.roll(corners, 1, axis=0)).any(axis=1)]
     count = len(corners)
-    if count < 4:
+    if count < 4 or _is_convex(corners):
         return False
     p, q = corners, np.roll(corners, -1, axis=0)
 
-    def side(a: NDArray[np.float64], b: NDArray[np.float64], c: NDArray[np.float64]) -> NDArray[np.float64]:
-        cross = (b[..., 0] - a[..., 0]) * (c[..., 1] - a[..., 1]) - (b[..., 1] - a[..., 1]) * (c[..., 0] - a[..., 0])
-        return cast("NDArray[np.float64]", np.sign(cross))
+    def meets(a: NDArray[np.float64], b: NDArray[np.float64], c: NDArray[np.float64]) -> NDArray[np.bool_]:
+        within = (np.minimum(a, b) <= c) & (c <= np.maximum(a, b))
+        return cast("NDArray[np.bool_]", (_side(a, b, c) == 0) & within.all(axis=-1))
 
     for i in range(count - 2):
         others = np.arange(i + 2, count - (1 if i == 0 else 0))
         if not others.size:
             continue
         a, b, c, d = p[i], q[i], p[others], q[others]
-        apart = side(a, b, c) * side(a, b, d) < 0
-        across = side(c, d, a) * side(c, d, b) < 0
-        if (apart & across).any():
+        apart = _side(a, b, c) * _side(a, b, d) < 0
+        across = _side(c, d, a) * _side(c, d, b) < 0
+        if (apart & across | meets(a, b, c) | meets(a, b, d) | meets(c, d, a) | meets(c, d, b)).any():
             return True
     return False
+
+
+def _is_convex(corners: NDArray[np.float64]) -> bool:
+    """Say whether an outline turns to one side only, and once around."""
+    step = np.roll(corners, -1, axis=0) - corners
+    following = np.roll(step, -1, axis=0)
+    cross = step[:, 0] * following[:, 1] - step[:, 1] * following[:, 0]
+    if (cross < 0).any() and (cross > 0).any():
+        return False
+    turn = np.arctan2(np.abs(cross), (step * following).sum(axis=1))
+    return bool(turn.max() < np.pi and turn.sum() < 3 * np.pi)
+
+
+def _side(a: NDArray[np.float64], b: NDArray[np.float64], c: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return on which side of the line from a to b each point c lies: -1, 0 on it, 1."""
+    cross = (b[..., 0] - a[..., 0]) * (c[..., 1] - a[..., 1]) - (b[..., 1] - a[..., 1]) * (c[..., 0] - a[..., 0])
+    return cast("NDArray[np.float64]", np.sign(cross))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from numbers import Real
 
 from fringespan.exceptions import SettingsError
 
@@ -31,11 +32,10 @@ class MeasurementSettings:
     smallest_distance_bins: float = 4.0
 
     def __post_init__(self) -> None:
-        if not 1e-6 <= self.false_peaks_per_region <= 1:
-            raise SettingsError(
-                f"false_peaks_per_region must lie between 1e-6 and 1, got {self.false_peaks_per_region!r}"
-            )
-        if not 2 <= self.smallest_distance_bins <= 100:
-            raise SettingsError(
-                f"smallest_distance_bins must lie between 2 and 100, got {self.smallest_distance_bins!r}"
-            )
+        _check("false_peaks_per_region", self.false_peaks_per_region, "1e-6", 1)
+        _check("smallest_distance_bins", self.smallest_distance_bins, 2, 100)
+
+
+def _check(name: str, value: object, lowest: float | str, highest: float) -> None:
+    if not (isinstance(value, Real) and float(lowest) <= float(value) <= highest):
+        raise SettingsError(f"{name} must lie between {lowest} and {highest}, got {value!r}")
