@@ -11,7 +11,6 @@ from dataclasses import replace
 from pathlib import Path
 
 import fringespan as fs
-from fringespan.export.figure import write_figure
 from fringespan.export.measurement_figure import measurement_figure
 from fringespan.sample_pictures import sample_file
 
@@ -22,7 +21,8 @@ def main() -> None:
     """Write the figure of the demo picture."""
     micrograph = replace(fs.read(sample_file("two_grains.ome.tif")), pixel_size_relative_uncertainty=0.0075, voltage_kv=300)
     regions = fs.read_regions(sample_file("two_grains.json"))
-    write_figure(measurement_figure([fs.measure(micrograph, region) for region in regions]), HERE / "two_grains.png")
+    figure = measurement_figure([fs.measure(micrograph, region) for region in regions])
+    figure.savefig(HERE / "two_grains.png", dpi=100)
 
 
 if __name__ == "__main__":
