@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+import unicodedata
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal
@@ -116,8 +117,8 @@ def _set_column(column: Column) -> list[str]:
     unit = f"({column.unit})" if column.unit else ""
     if column.alignment == "left":
         texts = [column.heading, unit, *column.cells]
-        width = max(map(len, texts))
-        return [text.ljust(width) for text in texts]
+        width = max(map(_shown_width, texts))
+        return [text + " " * (width - _shown_width(text)) for text in texts]
     before = [_length_before_point(cell) for cell in column.cells]
     longest = max(before, default=0)
     texts = [" " * (longest - n) + cell for n, cell in zip(before, column.cells, strict=True)]
@@ -125,6 +126,11 @@ def _set_column(column: Column) -> list[str]:
     width = max(inner, len(column.heading), len(unit))
     # the numbers stand as a block under the end of their heading
     return [column.heading.rjust(width), unit.rjust(width), *(text.ljust(inner).rjust(width) for text in texts)]
+
+
+def _shown_width(text: str) -> int:
+    """Return how many places a text takes; a bar over an index takes none."""
+    return sum(not unicodedata.combining(character) for character in text)
 
 
 def _length_before_point(cell: str) -> int:

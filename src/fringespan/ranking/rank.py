@@ -115,19 +115,22 @@ def rank_regions(
 
 
 def _by_spacing(observation: Observation, phases: Sequence[Phase], settings: RankingSettings) -> Ranking:
-    matches = candidates_by_spacing(observation, phases, settings) if observation.reflections else ()
+    matches, unlisted = candidates_by_spacing(observation, phases, settings) if observation.reflections else ((), 1.0)
     probability = {match.phase: match.probability for match in matches}
     credible = _credible(probability)
     stated = observation.pixel_size_relative_uncertainty is not None
     return Ranking(
         matches=matches,
         verdict="too few reflections",
-        sentence=sentence_of("too few reflections", matches, credible, 0.0, None, None),
+        sentence=sentence_of("too few reflections", matches, credible, unlisted, None, None),
         probability_of_phase=probability,
-        unlisted_probability=0.0,
+        unlisted_probability=unlisted,
         credible_phases=credible,
         cautions=cautions_of(matches, (), "too few reflections", None, stated),
-        assumptions=f"{len(phases)} phases compared by spacing alone, a phase not in the list left out of account.",
+        assumptions=(
+            f"{len(phases)} phases compared by spacing alone, all equally probable, and a phase not in the list with "
+            f"{settings.unlisted_probability:g}, before looking."
+        ),
     )
 
 

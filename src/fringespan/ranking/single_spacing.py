@@ -19,15 +19,18 @@ _GATE = 4.0
 _EXPONENT = 0.5
 _FLOOR = 0.004
 _D_MIN_NM = 0.08
+_UNLISTED_LOG_DENSITY = math.log(0.5)
+"""Of the spacings of any crystal on a logarithmic scale: most lie within a factor of e squared."""
 
 
 def candidates_by_spacing(
     observation: Observation, phases: Sequence[Phase], settings: RankingSettings
-) -> tuple[Hypothesis, ...]:
-    """Return the phases that have a reflection at every observed spacing, the most probable first.
+) -> tuple[tuple[Hypothesis, ...], float]:
+    """Return the phases that have a reflection at every observed spacing, and the probability of a phase not listed.
 
     Each phase is given the share of the probability that its reflections nearest to the spacings deserve: how far off
-    they are, within the uncertainty of the spacings and of the scale common to them, and how strong.
+    they are, within the uncertainty of the spacings and of the scale common to them, and how strong. A phase not in
+    the list may have a spacing anywhere, alike on a logarithmic scale.
     """
     stated = observation.pixel_size_relative_uncertainty
     scale = settings.scale_when_unstated if stated is None else float(np.max(stated))
@@ -44,12 +47,14 @@ def candidates_by_spacing(
         if best is not None:
             found.append((phase, common, *best))
     if not found:
-        return ()
-    evidence = np.array([log_evidence for _, _, log_evidence, _, _ in found])
+        return (), 1.0
+    listed = math.log((1 - settings.unlisted_probability) / len(phases))
+    unlisted = math.log(settings.unlisted_probability) + len(own) * _UNLISTED_LOG_DENSITY
+    evidence = np.array([listed + log_evidence for _, _, log_evidence, _, _ in found] + [unlisted])
     share = np.exp(evidence - evidence.max())
     share /= share.sum()
     result = []
-    for index in np.argsort(-share, kind="stable")[: settings.most_matches]:
+    for index in np.argsort(-share[:-1], kind="stable")[: settings.most_matches]:
         phase, common, _, families, offset = found[index]
         hkl: list[tuple[int, int, int] | None] = [None] * len(length)
         pulls: list[float | None] = [None] * len(length)
@@ -79,7 +84,7 @@ def candidates_by_spacing(
                 forbidden=tuple(forbidden),
             )
         )
-    return tuple(result)
+    return tuple(result), float(share[-1])
 
 
 def _best_reflections(
@@ -111,5 +116,8 @@ def _best_reflections(
         offset = float(np.sum(residual / sigma**2) / (np.sum(sigma**-2.0) + common**-2))
     residual = off[np.arange(len(length)), chosen] - offset
     log_evidence = -0.5 * float(np.sum((residual / sigma) ** 2)) - 0.5 * (offset / common) ** 2
+    # the integral over the common scale, so that tight agreement counts against a spacing anywhere
+    log_evidence -= float(np.sum(np.log(sigma))) + 0.5 * len(sigma) * math.log(2 * math.pi)
+    log_evidence -= 0.5 * math.log(1 + common**2 * float(np.sum(sigma**-2.0)))
     log_evidence += float(np.sum(np.log(weight[chosen] / weight.sum())))
     return log_evidence, [families[i] for i in chosen], offset
