@@ -15,8 +15,10 @@ import scipy.fft
 
 from fringespan.measurement import Measurement, measure
 from fringespan.micrograph import Micrograph
-from fringespan.region import Region
+from fringespan.noise import RingBackground, ring_background
+from fringespan.region import Footprint, Region, rectangle_footprint
 from fringespan.spacings import Peak
+from fringespan.spectrum import PowerSpectrum, RegionPixels, power_spectrum, prepare_pixels
 
 Density = Callable[[np.ndarray], np.ndarray]
 """Noise power density as a function of |g| in cycles per pixel."""
@@ -68,7 +70,7 @@ def blurred(f: np.ndarray) -> np.ndarray:
 
 def transfer_rings(f: np.ndarray) -> np.ndarray:
     """The rings that a lens makes of an amorphous film."""
-    return 0.4 + 2.0 * np.sin(np.pi * (2 * f + 120 * f * f)) ** 2 * np.exp(-((f / 0.25) ** 2))
+    return 0.4 + 2.0 * np.sin(np.pi * (1.5 * f + 60 * f * f)) ** 2 * np.exp(-((f / 0.25) ** 2))
 
 
 def noise(rng: np.random.Generator, shape: tuple[int, int], density: Density = white) -> np.ndarray:
@@ -79,6 +81,31 @@ def noise(rng: np.random.Generator, shape: tuple[int, int], density: Density = w
     f = np.hypot(scipy.fft.fftfreq(large[0])[:, None], scipy.fft.rfftfreq(large[1])[None])
     field_ = scipy.fft.irfft2(scipy.fft.rfft2(rng.standard_normal(large)) * np.sqrt(density(f)), s=large)
     return field_[: shape[0], : shape[1]]
+
+
+@dataclass(frozen=True)
+class Prepared:
+    """A picture on its way: pixels, spectrum, background."""
+
+    pixels: RegionPixels
+    spectrum: PowerSpectrum
+    background: RingBackground
+
+    @property
+    def footprint(self) -> Footprint:
+        return self.pixels.footprint
+
+
+def prepared(values: np.ndarray, mask: np.ndarray | None = None, aspect: float = 1.0) -> Prepared:
+    """Take a picture, or the part of it that a mask shows, to its spectrum and background."""
+    footprint = rectangle_footprint(values.shape) if mask is None else Footprint.from_mask(mask)
+    spectrum, pixels = power_spectrum(prepare_pixels(values, footprint))
+    return Prepared(pixels, spectrum, ring_background(spectrum, aspect))
+
+
+def ellipse_mask(shape: tuple[int, int], share: float = 0.98) -> np.ndarray:
+    y, x = places(shape)
+    return (2 * y / shape[0]) ** 2 + (2 * x / shape[1]) ** 2 < share**2
 
 
 # --- what a perfect fit reaches -------------------------------------------------------------------------------------
