@@ -195,6 +195,26 @@ def test_a_record_of_another_program_that_stands_in_the_place_is_replaced_only_w
     assert [p.name for p in tmp_path.iterdir()] == ["record.json"]
 
 
-def test_phases_are_not_compared_in_silence(run, picture):
-    assert run("measure", picture, "--phases", "none").exit_code == 0
-    assert run("measure", picture, "--phases", "gold").exit_code == 2
+def test_peaks_are_compared_with_phases(run, picture, tmp_path):
+    file = tmp_path / "record.json"
+    scale = ("--pixel-size", "0.021", "--pixel-size-uncertainty", "1")
+    done = run("measure", picture, "--phases", "gold,tio2_a", *scale, "--json", file)
+    assert done.exit_code == 0
+    [region] = read_record(file).regions
+    identification = region.identification
+    assert identification.verdict is not None
+    assert identification.sentence.split()[0] in done.output
+    assert {match.phase for match in identification.matches} <= {"au", "tio2_a"}
+    assert all(len(match.hkl) == len(region.peaks) for match in identification.matches)
+
+
+def test_without_phases_nothing_is_compared(run, picture, tmp_path):
+    file = tmp_path / "record.json"
+    assert run("measure", picture, "--phases", "none", "--json", file).exit_code == 0
+    assert read_record(file).regions[0].identification.verdict is None
+
+
+def test_an_unknown_phase_is_refused_before_anything_is_measured(run, picture):
+    done = run("measure", picture, "--phases", "unobtainium")
+    assert done.exit_code == 1
+    assert "no phase called" in done.stderr

@@ -21,6 +21,7 @@ from fringespan.command_line.picture_options import PictureOptions, takes_pictur
 from fringespan.exceptions import FringespanError
 
 if TYPE_CHECKING:
+    from fringespan.crystal.phase import Phase
     from fringespan.measurement import Measurement
     from fringespan.record import Record
 
@@ -37,6 +38,7 @@ Examples:
   fringespan measure particle.tif
   fringespan measure particle.tif --region "grain A: 40,30 40,286 296,286 296,30"
   fringespan measure particle.tif --pixel-size 0.021 --pixel-size-uncertainty 1.5 --voltage 300
+  fringespan measure particle.tif --pixel-size-uncertainty 1 --phases gold,tio2_a,specimen.cif
   fringespan measure particle.tif --regions earlier_record.json --json record.json --figure figure.pdf
   fringespan measure series/*.tif --json records.json --csv table.csv
 
@@ -65,10 +67,11 @@ def measure(images: tuple[str, ...], picture: PictureOptions, output: OutputOpti
     record_files = _one_file_a_picture(output.json, images)
     figure_files = _one_file_a_picture(output.figure, images)
     refuse_to_overwrite(images, [*record_files, *figure_files, *([output.csv] if output.csv is not None else [])])
+    phases = picture.phases_to_compare()
     records: list[Record] = []
     for number, image in enumerate(images):
         try:
-            measurements, record = _measured(image, picture)
+            measurements, record = _measured(image, picture, phases)
         except (FringespanError, OSError, MemoryError) as problem:
             complain(_about(image, in_words(problem)))
             continue
@@ -87,13 +90,13 @@ def measure(images: tuple[str, ...], picture: PictureOptions, output: OutputOpti
     return 0 if len(records) == len(images) else 1
 
 
-def _measured(image: str, picture: PictureOptions) -> tuple[list[Measurement], Record]:
+def _measured(image: str, picture: PictureOptions, phases: Sequence[Phase]) -> tuple[list[Measurement], Record]:
     from fringespan.measurement import measure as measure_region
-    from fringespan.record import record_of
+    from fringespan.record import identifications_of, record_of
 
     micrograph = picture.open(image)
     measurements = [measure_region(micrograph, region) for region in picture.regions_of(micrograph)]
-    return measurements, record_of(measurements)
+    return measurements, record_of(measurements, identifications_of(measurements, phases))
 
 
 def _draw(measurements: Sequence[Measurement], file: Path) -> None:

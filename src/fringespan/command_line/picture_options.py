@@ -12,6 +12,7 @@ import click
 from fringespan.exceptions import CalibrationError, RegionError
 
 if TYPE_CHECKING:
+    from fringespan.crystal.phase import Phase
     from fringespan.micrograph import Micrograph
     from fringespan.region import Region
 
@@ -32,6 +33,7 @@ class PictureOptions:
     regions : tuple of Region
         Empty: the whole picture.
     phases : str
+        "none", "all", or names and CIF files with commas between.
     """
 
     pixel_size_nm: tuple[float, float] | None
@@ -62,6 +64,14 @@ class PictureOptions:
         from fringespan.region import Region
 
         return self.regions or (Region.whole(micrograph.shape),)
+
+    def phases_to_compare(self) -> tuple[Phase, ...]:
+        """Return the phases to compare with; none of them: nothing is compared."""
+        if self.phases.strip().lower() == "none":
+            return ()
+        from fringespan.crystal.library import load_phases
+
+        return load_phases(name for name in self.phases.split(",") if name.strip())
 
 
 def takes_picture_options(command: Callable[..., Any]) -> Callable[..., Any]:
@@ -174,12 +184,6 @@ def _drawn_region(value: str) -> DrawnRegion:
     return name.strip(), points
 
 
-def _phases(_context: click.Context, _option: click.Parameter, value: str) -> str:
-    if value != "none":
-        raise click.BadParameter("comparing with phases is not part of this version; leave the option out")
-    return value
-
-
 _OPTIONS: list[Callable[[Callable[..., Any]], Callable[..., Any]]] = [
     click.option(
         "--pixel-size",
@@ -214,7 +218,6 @@ _OPTIONS: list[Callable[[Callable[..., Any]], Callable[..., Any]]] = [
     ),
     click.option(
         "--phases",
-        callback=_phases,
         default="none",
         show_default=True,
         metavar="none|all|NAME,FILE.cif,...",

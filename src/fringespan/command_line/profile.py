@@ -73,6 +73,8 @@ def profile(
     refuse_to_overwrite([image], output.files)
     if picture.regions:
         complain("regions play no part in a profile", "fringespan profile")
+    if picture.phases.strip().lower() != "none":
+        complain("a profile is not compared with phases", "fringespan profile")
     micrograph = picture.open(image)
     try:
         measured = measure_profile(micrograph, line, width_px=width)

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fringespan.cautions import Caution, gravest_first
+from fringespan.crystal.notation import direction_text, indices_text
 from fringespan.export.plain_text import Column, Line, aligned_table, enumeration, one_line, paragraph, shortened
 from fringespan.record import Match, Record, RecordedPicture, RecordedRegion
 from fringespan.spacings import Peak
@@ -136,6 +137,11 @@ def _peak_lines(picture: RecordedPicture, region: RecordedRegion, width: int) ->
     directions = [value_text(p.direction_deg, p.direction_uncertainty_deg) for p in peaks]
     columns.append(Column("direction", "deg", directions, rank=1))
     columns.append(Column("S/N", "", [f"{p.signal_to_noise:.0f}" for p in peaks], rank=5))
+    if region.identification.matches:
+        best = region.identification.matches[0]
+        found = dict(enumerate(best.hkl))
+        planes = [NOT_GIVEN if (hkl := found.get(i)) is None else indices_text(hkl) for i in range(len(peaks))]
+        columns.append(Column(one_line(best.phase), "hkl", planes, "left", rank=1))
     if any(p.lattice_index is not None for p in peaks):
         indices = ["off" if p.lattice_index is None else "{:2d} {:2d}".format(*p.lattice_index) for p in peaks]
         columns.append(Column("lattice", "", indices, "left", rank=2))
@@ -250,15 +256,17 @@ def _verdict_lines(region: RecordedRegion, width: int) -> list[Line]:
     verdict, matches = region.identification.verdict, region.identification.matches
     if verdict is None:
         return []
-    text = verdict[0].upper() + verdict[1:]
+    text = region.identification.sentence or f"{verdict[0].upper()}{verdict[1:]}."
+    lines = paragraph(text, width, first="  ", emphasis="subheading")
     if matches:
-        text += ": " + "; ".join(_match_words(match) for match in matches[:3])
-    return paragraph(text + ".", width, first="  ", emphasis="subheading")
+        best = "; ".join(_match_words(match) for match in matches[:3])
+        lines += paragraph(f"{best}.", width, first="  best: ", emphasis="quiet")
+    return lines
 
 
 def _match_words(match: Match) -> str:
-    zone = " ".join(str(index) for index in match.zone)
-    return f"{one_line(match.phase)} along [{zone}], probability {match.probability:.2g}"
+    seen = "" if match.zone is None else f" along {direction_text(match.zone)}"
+    return f"{one_line(match.phase)}{seen}, probability {match.probability:.2g}"
 
 
 def caution_lines(cautions: Iterable[tuple[Caution, str]], width: int) -> list[Line]:

@@ -2,6 +2,7 @@
 
 from fringespan.record.document import SCHEMA, document_of, plain_values, record_from, record_schema
 from fringespan.record.file import json_text, read_record, read_regions, write_record
+from fringespan.record.identification import identifications_of
 from fringespan.record.values import Identification, Match, Record, RecordedPicture, RecordedRegion, record_of
 
 __all__ = [
@@ -12,6 +13,7 @@ __all__ = [
     "RecordedPicture",
     "RecordedRegion",
     "document_of",
+    "identifications_of",
     "json_text",
     "plain_values",
     "read_record",

@@ -76,6 +76,7 @@ def document_of(record: Record) -> Document:
                 "lattice": region.lattice,
                 "matches": region.identification.matches,
                 "verdict": region.identification.verdict,
+                "sentence": region.identification.sentence,
                 "cautions": region.cautions,
             }
             for region in record.regions
@@ -182,7 +183,9 @@ def _region_from(document: Document) -> RecordedRegion:
         angles=tuple(_value_from(PairAngle, angle) for angle in document["angles"]),
         lattice=None if lattice is None else _value_from(PlaneLattice, lattice),
         identification=Identification(
-            verdict=document["verdict"], matches=tuple(_value_from(Match, match) for match in document["matches"])
+            verdict=document["verdict"],
+            matches=tuple(_value_from(Match, match) for match in document["matches"]),
+            sentence=document.get("sentence", ""),
         ),
         cautions=_cautions_from(document["cautions"]),
     )

@@ -68,12 +68,12 @@ class Match:
     ----------
     phase : str
         Built-in id, or the data block name of a CIF file.
-    zone : (int, int, int)
+    zone : (int, int, int) or None
+        None for a candidate by one spacing alone.
     probability : float
     hkl : tuple of (int, int, int) or None
         One entry a peak; None where the hypothesis leaves it unexplained.
-    rotation_deg, scale : float
-    scale_uncertainty : float or None
+    rotation_deg, scale, scale_uncertainty : float or None
     fits : bool
     pulls : tuple of float or None
     indistinguishable_from : tuple of (str, (int, int, int))
@@ -81,11 +81,11 @@ class Match:
     """
 
     phase: str
-    zone: tuple[int, int, int]
+    zone: tuple[int, int, int] | None
     probability: float
     hkl: tuple[tuple[int, int, int] | None, ...]
-    rotation_deg: float
-    scale: float
+    rotation_deg: float | None
+    scale: float | None
     scale_uncertainty: float | None
     fits: bool
     pulls: tuple[float | None, ...]
@@ -102,12 +102,15 @@ class Identification:
         None: no phases were compared.
     matches : tuple of Match
         Best first.
+    sentence : str
+        The verdict in words, with what would decide an open case.
     cautions : tuple of Caution
         Those that the comparison adds to the region's.
     """
 
     verdict: str | None = None
     matches: tuple[Match, ...] = ()
+    sentence: str = ""
     cautions: tuple[Caution, ...] = ()
 
 
