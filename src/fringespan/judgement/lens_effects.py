@@ -95,7 +95,7 @@ def lens_cautions(effects: LensEffects, signal_to_noise: Sequence[float], lens: 
 
 def defocus_words(defocus_nm: float) -> str:
     """Return a defocus in words, such as "60 nm underfocus"."""
-    return f"{abs(defocus_nm):.4g} nm {'overfocus' if defocus_nm < 0 else 'underfocus'}"
+    return f"{abs(defocus_nm):.3g} nm {'overfocus' if defocus_nm < 0 else 'underfocus'}"
 
 
 def off_bragg_caution(finest_nm: float, voltage_kv: float) -> tuple[Caution, ...]:

@@ -63,7 +63,9 @@ def needed_fringes(
     lowest = settings.smallest_distance_bins / shortest
     used = background.density[(radius >= lowest) & (radius <= 0.5)]
     root = math.sqrt(detection_threshold(footprint.count, settings.false_peaks_per_region)) + _NINE_IN_TEN
-    least, greatest = (2 * root * math.sqrt(float(s) / footprint.count) for s in (used.min(), used.max()))
+    # the lowest few rings are low by chance only
+    densities = np.percentile(used, 10), used.max()
+    least, greatest = (2 * root * math.sqrt(float(s) / footprint.count) for s in densities)
     return NeededFringes(2.0, 1 / lowest, least, greatest)
 
 

@@ -34,7 +34,7 @@ __all__ = [
 
 BROKEN_FRINGES = Caution(
     "broken-fringes",
-    "grave",
+    "warning",
     "The fringes are broken across the crystal, where their contrast reverses or they bend; no spacing is given.",
     "Draw the region around a part where they run straight, or take the picture at another defocus.",
 )
