@@ -21,9 +21,9 @@ from fringespan.finite_crystal import (
 from fringespan.lattice import LatticeFit, find_lattice, lattice_points
 from fringespan.noise import RingBackground, ring_background, rings_at
 from fringespan.peaks.demodulation import demodulate
-from fringespan.peaks.detection import density_at, matched_ratio_at, waves_removed
+from fringespan.peaks.detection import density_at, matched_ratio_at, tapered_maximum, waves_removed
 from fringespan.peaks.fringes import Fringes, find_fringes
-from fringespan.peaks.joint_fit import fit_jointly
+from fringespan.peaks.joint_fit import JointFit, fit_jointly, solve_waves
 from fringespan.peaks.misfit import MISFIT_LIMIT
 from fringespan.region import Footprint
 from fringespan.settings import MeasurementSettings
@@ -40,6 +40,9 @@ _CLEAR = 60.0
 
 _READABLE = 150.0
 """Power ratio from which the fringes' own phase and plateau are read; weaker ones take those of the crystal."""
+
+_RUNAWAY_BINS = 0.4
+"""A misfitting wave further than this from the tapered spectrum's maximum has run to one side."""
 
 _STRAY = 0.02
 """Peaks off the lattice of an uneven crystal that have less than this share of the strongest power are strays."""
@@ -334,6 +337,26 @@ def _with_lattice_points(
     )
 
 
+def _centred(scene: _Scene) -> _Scene:
+    """Put waves that misfit where the tapered spectrum has its maximum.
+
+    The plane-wave fit of a bent or broken fringe runs to whichever side of its region happens to be straighter.
+    """
+    fit, spectrum = scene.fringes.fit, scene.spectrum
+    bins = np.array(scene.footprint.shape)
+    top = np.array([tapered_maximum(spectrum, f) for f in fit.frequency]).reshape(-1, 2)
+    away = np.hypot(*((top - fit.frequency) * bins).T)
+    moved = (scene.fringes.residuals.misfit > MISFIT_LIMIT) & (fit.power_ratio > _CLEAR) & (away > _RUNAWAY_BINS)
+    if not moved.any():
+        return scene
+    frequency = np.where(moved[:, None], top, fit.frequency)
+    demodulation = fit.demodulation.replaced(moved, demodulate(scene.pixels, frequency[moved]))
+    amplitude, _, covariance = solve_waves(scene.footprint, demodulation, scene.fringes.density)
+    power_ratio = np.abs(amplitude) ** 2 * scene.footprint.count / scene.fringes.density
+    fit = JointFit(frequency, amplitude, covariance, power_ratio, demodulation)
+    return replace(scene, fringes=replace(scene.fringes, fit=fit))
+
+
 def _assembled(
     scene: _Scene,
     uneven: bool,
@@ -343,6 +366,8 @@ def _assembled(
     delocalisation_nm: DelocalisationLaw | None,
     first_lattice: LatticeFit | None,
 ) -> CrystalFringes:
+    if uneven:
+        scene = _centred(scene)
     fit, misfit = scene.fringes.fit, scene.fringes.residuals.misfit
     n = len(fit.power_ratio)
     frequency, covariance = fit.frequency.copy(), fit.covariance.copy()
@@ -360,6 +385,7 @@ def _assembled(
         for k in np.flatnonzero(own):
             covariance[2 * k : 2 * k + 2] *= crystal.efficiency[k]
             covariance[:, 2 * k : 2 * k + 2] *= crystal.efficiency[k]
+            covariance[2 * k : 2 * k + 2, 2 * k : 2 * k + 2] += crystal.bend[k] * np.outer(size, size)
         readable = fit.power_ratio > _READABLE
         withheld = [reason if r else None for reason, r in zip(why_broken(crystal), readable, strict=True)]
         crystal = _levelled(crystal, readable, fit.power_ratio)

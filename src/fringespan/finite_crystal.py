@@ -33,6 +33,9 @@ __all__ = [
 
 _TAPER_REACH = 0.9
 
+_BENT_PHASE = 0.2
+"""Phase departure in rad, RMS, from which the halves of a crystal are compared."""
+
 
 @dataclass(frozen=True, eq=False, slots=True)
 class CrystalFit:
@@ -56,6 +59,9 @@ class CrystalFit:
         Root mean square difference between four ways to weight the fit, in cycles over the extent.
     share : ndarray, shape (n,)
         Part of the region that the fringes fill.
+    bend : ndarray, shape (n, 2, 2)
+        Covariance of the frequency from fringes that bend: a twelfth of the squared difference between halves of the crystal,
+        for both ways to halve it; 0 where the phase departs little.
     efficiency : ndarray, shape (n,)
         Standard deviation of this fit along g over that of a plane wave filling the whole region, by the noise alone.
     """
@@ -68,6 +74,7 @@ class CrystalFit:
     one_sided: NDArray[np.bool_]
     spread: NDArray[np.float64]
     share: NDArray[np.float64]
+    bend: NDArray[np.float64]
     efficiency: NDArray[np.float64]
 
 
@@ -265,7 +272,7 @@ def fit_crystal(
     shift = np.zeros((n, 2))
     length, width, phase, plateau = np.zeros(n), np.zeros(n), np.zeros(n), np.zeros(n)
     spread, share, efficiency = np.zeros(n), np.zeros(n), np.ones(n)
-    one_sided = np.zeros(n, bool)
+    one_sided, bend = np.zeros(n, bool), np.zeros((n, 2, 2))
     grid_y, grid_x = y[:, None], x[None]
     common = crystal_mask(fields, np.sqrt(power_ratio))
     for k in range(n):
@@ -298,13 +305,34 @@ def fit_crystal(
         round_weight = np.exp(-((grid_y - middle[0]) ** 2 + (grid_x - middle[1]) ** 2) / (2 * sigma**2)) * mask
         _fit_shift(field, round_weight, y, x, shift[k, 0], shift[k, 1], 0.0, others[2])
         spread[k] = np.sqrt((((others - shift[k]) @ unit) ** 2).mean()) * length[k]
+        if phase[k] > _BENT_PHASE:
+            bend[k] = _bend(field, weight, y, x, shift[k])
         # noise of sum(w x y) / (A sum(w x^2)) against that of a wave of the mean amplitude over the whole region
         line = _along(weight, grid_y, grid_x, unit)
         mean = (weight * amplitude * line**2).sum()
         noise_share = np.sqrt((weight**2 * line**2).sum())
         whole = np.sqrt((fields.inside * _along(fields.inside.astype(float), grid_y, grid_x, unit) ** 2).sum())
         efficiency[k] = noise_share / max(mean, 1e-30) * whole * _level(amplitude, fields.inside)
-    return CrystalFit(shift, length, width, phase, plateau, one_sided, spread, share, efficiency)
+    return CrystalFit(shift, length, width, phase, plateau, one_sided, spread, share, bend, efficiency)
+
+
+def _bend(
+    field: NDArray[np.complex128],
+    weight: NDArray[np.float64],
+    y: NDArray[np.float64],
+    x: NDArray[np.float64],
+    shift: NDArray[np.float64],
+) -> NDArray[np.float64]:
+    """Return a twelfth of the squared difference between the frequencies of two halves, summed over both halvings."""
+    total = np.zeros((2, 2))
+    halves = np.empty((2, 2))
+    for line in (y[:, None] + 0 * x[None], 0 * y[:, None] + x[None]):
+        middle = (weight * line).sum() / weight.sum()
+        _fit_shift(field, weight * (line < middle), y, x, shift[0], shift[1], 0.0, halves[0])
+        _fit_shift(field, weight * (line >= middle), y, x, shift[0], shift[1], 0.0, halves[1])
+        difference = halves[1] - halves[0]
+        total += np.outer(difference, difference) / 12
+    return total
 
 
 def _level(amplitude: NDArray[np.float64], inside: NDArray[np.bool_]) -> float:

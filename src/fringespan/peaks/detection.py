@@ -21,7 +21,7 @@ from fringespan.noise import RingBackground, kth_smallest, trimmed_mean
 from fringespan.region import Footprint
 from fringespan.spectrum import PowerSpectrum, taper
 
-__all__ = ["Candidates", "density_at", "detection_threshold", "find_candidates", "matched_ratio_at", "waves_removed"]
+__all__ = ["Candidates", "density_at", "detection_threshold", "find_candidates", "matched_ratio_at", "tapered_maximum", "waves_removed"]
 
 _FIRST_PASS = 0.36
 """Share of the detection threshold that a bin alone must reach over the rings; a tapered bin between two sees a third."""
@@ -489,6 +489,32 @@ def density_at(
         frequency * spectrum.shape, out,
     )  # fmt: skip
     return out[0], out[1]
+
+
+def tapered_maximum(spectrum: PowerSpectrum, frequency: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return where the tapered power is highest within two bins of a frequency, in cycles per pixel.
+
+    Parameters
+    ----------
+    spectrum : PowerSpectrum
+    frequency : ndarray, shape (2,)
+        (row, column) in cycles per pixel.
+
+    Returns
+    -------
+    ndarray, shape (2,)
+        Refined by the centre of gravity of the 3 x 3 bins around the maximum.
+    """
+    nx = spectrum.shape[1]
+    i, j = (int(v) for v in np.rint(frequency * spectrum.shape))
+    around = np.array(
+        [[_power_at(spectrum.power, i + a, j + b, nx) for b in range(-3, 4)] for a in range(-3, 4)], dtype=float
+    )
+    row, column = np.unravel_index(around[1:-1, 1:-1].argmax(), (5, 5))
+    patch = around[row : row + 3, column : column + 3]
+    step = np.arange(-1, 2)
+    centre = np.array([step @ patch.sum(axis=1), step @ patch.sum(axis=0)]) / patch.sum()
+    return np.asarray((np.array([i + row - 2, j + column - 2]) + centre) / spectrum.shape)
 
 
 def matched_ratio_at(
