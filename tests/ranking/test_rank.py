@@ -417,3 +417,11 @@ def test_nothing_heavy_is_loaded_before_a_ranking_is_asked_for() -> None:
     assert (
         subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout.strip() == "[]"
     )
+
+
+def test_a_region_that_was_seen_to_hold_another_crystal_is_not_one(observe: Observe) -> None:
+    seen = observe("tio2_a", (1, 0, 0), strongest("tio2_a", (1, 0, 0), 6), told=0.002)
+    ranking = rank_phases(replace(seen, holds_other_crystal=True), ALL)
+    assert ranking.verdict == "more than one crystal"
+    assert ranking.matches[0].phase == "tio2_a"
+    assert "one grain" in ranking.sentence

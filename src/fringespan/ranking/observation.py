@@ -21,6 +21,9 @@ _ROLES = ("reflection", "combination", "uncertain")
 _CRYSTAL_ACROSS = 0.3
 """An uneven crystal shifts a spacing's direction by this part of what it shifts its length by."""
 
+_OTHER_CRYSTAL = "another-crystal-in-region"
+"""Code of the caution by which a measurement says so."""
+
 _LEAST_RELATIVE_SIGMA = 1e-6
 _MOST_RELATIVE_SIGMA = 0.3
 
@@ -86,6 +89,8 @@ class Observation:
     band_limit_per_nm : float, optional
         Length of g up to which reflections would have been seen, where it is known: then also those count as not seen
         that lie beyond the longest one observed.
+    holds_other_crystal : bool, optional
+        Whether the region showed fringes of another crystal too, which are not among the reflections.
     name : str, optional
         What to call it.
     """
@@ -94,6 +99,7 @@ class Observation:
     pixel_size_relative_uncertainty: float | tuple[float, float] | None = None
     directions_known: bool = True
     band_limit_per_nm: float | None = None
+    holds_other_crystal: bool = False
     name: str = "region"
 
     def __post_init__(self) -> None:
@@ -165,6 +171,7 @@ def observation_of(measurement: Measurement) -> Observation:
     return Observation(
         reflections=tuple(reflections),
         pixel_size_relative_uncertainty=micrograph.pixel_size_relative_uncertainty,
+        holds_other_crystal=any(caution.code == _OTHER_CRYSTAL for caution in measurement.cautions),
         name=measurement.region.name,
     )
 

@@ -143,7 +143,8 @@ def _ranking(
     named = {phases[i].id: float(of_phase[i]) for i in order if of_phase[i] > 0}
     matches = described(comparison, observation, settings.most_matches)
     second = _second_crystal(observation, comparison, matches, phases, settings)
-    verdict = verdict_of(matches, named, unlisted, second, settings)
+    is_mixed = observation.holds_other_crystal or (second is not None and bool(matches))
+    verdict = verdict_of(matches, named, unlisted, is_mixed, settings)
     credible = _credible(named)
     stated = observation.pixel_size_relative_uncertainty is not None
     return Ranking(

@@ -29,14 +29,14 @@ def verdict_of(
     matches: Sequence[Hypothesis],
     probability_of_phase: dict[str, float],
     unlisted: float,
-    second: Hypothesis | None,
+    is_mixed: bool,
     settings: RankingSettings,
 ) -> Verdict:
-    """Return the verdict on hypotheses sorted best first."""
-    if not matches or not any(match.fits for match in matches) or unlisted > _UNLISTED_ABOVE:
-        return "more than one crystal" if second is not None and matches else "unidentified"
-    if second is not None:
+    """Return the verdict on hypotheses sorted best first; `is_mixed`: there are signs of another crystal."""
+    if is_mixed:
         return "more than one crystal"
+    if not matches or not any(match.fits for match in matches) or unlisted > _UNLISTED_ABOVE:
+        return "unidentified"
     best, probability = next(iter(probability_of_phase.items()))
     if probability > settings.identified_above and matches[0].phase == best and matches[0].fits:
         return "identified"
@@ -65,6 +65,8 @@ def sentence_of(
             f"Too few reflections to name a phase: {listed}. Two sets of fringes and the angle between them are the "
             "least."
         )
+    if verdict == "more than one crystal" and not matches:
+        return "More than one crystal in the region, and none of the phases compared. Draw a region inside one grain."
     if verdict == "unidentified":
         if not matches:
             return "None of the phases compared has reflections like these. Compare with more phases."
@@ -79,6 +81,11 @@ def sentence_of(
         )
     best = matches[0]
     explained = sum(hkl is not None for hkl in best.hkl)
+    if verdict == "more than one crystal" and second is None:
+        return (
+            f"More than one crystal in the region: the largest may be {name_of(best)}, {explained} of {len(best.hkl)} "
+            "peaks explained. Draw a region inside one grain."
+        )
     if verdict == "more than one crystal" and second is not None:
         return (
             f"More than one crystal in the region: {name_of(best)} explains {explained} of {len(best.hkl)} peaks, and "
