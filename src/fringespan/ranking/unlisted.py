@@ -12,6 +12,10 @@ from fringespan.ranking.score import COMBINATION_SHARE, solve
 
 __all__ = ["unlisted_evidence"]
 
+_PICKABLE = 0.7
+_FEWEST = 8.0
+"""A sum or harmonic of other peaks is one of this part of the nodes as well, of which there are at least so many."""
+
 _LOG_2PI = math.log(2 * math.pi)
 
 
@@ -119,9 +123,7 @@ def unlisted_evidence(
                     left -= fading
             for k in range(n):
                 if not is_independent[k]:
-                    fading = math.exp(-decay * abs(q[k]) ** 2 / longest_squared)
-                    value += math.log(COMBINATION_SHARE + fading / max(left, fading, least))
-                    left -= fading
+                    value += math.log(COMBINATION_SHARE + 1 / max(_PICKABLE * nodes, _FEWEST))
             best = max(best, value)
         result[s] = best
     return result
