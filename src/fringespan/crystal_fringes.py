@@ -243,6 +243,9 @@ def _lattice(scene: _Scene, crystal: CrystalFit | None, size: NDArray[np.float64
         tolerance = np.where(even, 0.02, 0.1)
     else:
         extent, tolerance = crystal.length, lattice_tolerance(crystal.phase_rms, crystal.plateau_loss)
+    length = np.sqrt((g * g).sum(axis=1))
+    # a sum or harmonic has the errors of the waves it is made of: in cycles they grow with its order
+    tolerance = tolerance * length / length.min()
     sigma = np.hypot(noise_along, tolerance / extent)
     return find_lattice(g, sigma, np.hypot(noise_across, 0.3 * tolerance / extent), np.sqrt(fit.power_ratio))
 
