@@ -434,3 +434,13 @@ def test_preparing_leaves_nothing_slow_for_the_first_region(observe: Observe) ->
     start = time.process_time()
     rank_phases(observe("tio2_a", (1, 0, 0), strongest("tio2_a", (1, 0, 0), 6)), ALL)
     assert time.process_time() - start < 0.1  # a compiler would take seconds, tables a good part of one
+
+
+def test_candidates_that_are_not_it_are_ruled_out_with_the_reason(observe: Observe) -> None:
+    asked = [load_phase(p) for p in ("au", "tio2_a", "fe", "mgo")]
+    ranking = rank_phases(observe("au", (1, 1, 0), GOLD_110, told=0.005, noise=5e-4), asked)
+    assert ranking.matches[0].phase == "au"
+    assert set(ranking.ruled_out) == {"tio2_a", "fe", "mgo"}
+    assert "pixel size" in ranking.ruled_out["mgo"]  # the same net, 3 % larger
+    assert all(f"{phase.name} is ruled out" in ranking.sentence for phase in asked[1:])
+    assert rank_phases(observe("au", (1, 1, 0), GOLD_110), ALL).ruled_out == {}

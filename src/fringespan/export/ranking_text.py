@@ -113,6 +113,7 @@ def ranking_document(ranking: Ranking) -> dict[str, Any]:
         "unlisted_probability": ranking.unlisted_probability,
         "credible_phases": list(ranking.credible_phases),
         "second_crystal": None if ranking.second_crystal is None else match_document(ranking.second_crystal),
+        "ruled_out": ranking.ruled_out,
         "assumptions": ranking.assumptions,
         "cautions": [
             {"code": c.code, "gravity": c.gravity, "text": c.text, "remedy": c.remedy} for c in ranking.cautions

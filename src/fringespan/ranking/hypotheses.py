@@ -143,6 +143,8 @@ class Ranking:
         What the peaks that the best hypothesis leaves over look like, where they are those of another crystal.
     assumptions : str
         What was compared and taken for granted, in words.
+    ruled_out : dict of str to str
+        For each phase of a short list whose probability is below 1 %, what speaks against it.
     """
 
     matches: tuple[Hypothesis, ...]
@@ -154,3 +156,4 @@ class Ranking:
     cautions: tuple[Caution, ...]
     second_crystal: Hypothesis | None = None
     assumptions: str = ""
+    ruled_out: dict[str, str] = field(default_factory=dict)

@@ -16,8 +16,9 @@ from fringespan.ranking.comparison import Comparison, compare
 from fringespan.ranking.description import described, normalised
 from fringespan.ranking.hypotheses import Hypothesis, Ranking, RankingSettings
 from fringespan.ranking.observation import Observation, observation_of
+from fringespan.ranking.ruled_out import reasons_against
 from fringespan.ranking.single_spacing import candidates_by_spacing
-from fringespan.ranking.verdict import cautions_of, sentence_of, verdict_of
+from fringespan.ranking.verdict import cautions_of, ruled_out_text, sentence_of, verdict_of
 from fringespan.ranking.zone_tables import LARGEST_ZONE_INDEX, MOST_ZONES
 
 __all__ = ["Shared", "prepare_ranking", "rank_phases", "rank_regions"]
@@ -163,15 +164,18 @@ def _ranking(
     verdict = verdict_of(matches, named, unlisted, is_mixed, settings)
     credible = _credible(named)
     stated = observation.pixel_size_relative_uncertainty is not None
+    against = reasons_against(observation, comparison, matches, named, phases, settings) if matches else {}
+    sentence = sentence_of(verdict, matches, credible, unlisted, second, comparison)
     return Ranking(
         matches=matches,
         verdict=verdict,
-        sentence=sentence_of(verdict, matches, credible, unlisted, second, comparison),
+        sentence=sentence + ruled_out_text({p.name: against[p.id] for p in phases if p.id in against}),
         probability_of_phase=named,
         unlisted_probability=unlisted,
         credible_phases=credible,
         cautions=cautions_of(matches, credible, verdict, comparison, stated),
         second_crystal=second,
+        ruled_out=against,
         assumptions=(
             f"{len(phases)} phases compared, zones with indices up to {LARGEST_ZONE_INDEX} and at most {MOST_ZONES} a "
             f"phase, all equally probable, and a phase not in the list with {settings.unlisted_probability:g}, before "

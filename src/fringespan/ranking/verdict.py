@@ -12,7 +12,7 @@ from fringespan.crystal.phase import Phase
 from fringespan.ranking.comparison import Comparison
 from fringespan.ranking.hypotheses import Hypothesis, RankingSettings, Verdict
 
-__all__ = ["NAMED_WITH_CARE", "cautions_of", "sentence_of", "verdict_of"]
+__all__ = ["NAMED_WITH_CARE", "cautions_of", "ruled_out_text", "sentence_of", "verdict_of"]
 
 _SCALE_PULL = 2.5
 _UNLISTED_ABOVE = 0.95
@@ -102,6 +102,11 @@ def sentence_of(
         )
     advice = _advice(matches, comparison) if comparison is not None else ""
     return f"Ambiguous between {_joined(several)}" + (f"; {possible}" if possible else "") + ". " + advice
+
+
+def ruled_out_text(reasons: dict[str, str]) -> str:
+    """Return what speaks against phases, by name, as the end of a verdict's sentence; empty if there is nothing."""
+    return "".join(f" {name} is ruled out: {reason}." for name, reason in reasons.items())
 
 
 def _advice_scale() -> str:

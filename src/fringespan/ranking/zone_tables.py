@@ -136,7 +136,7 @@ def cache_folder() -> Path:
 
 
 _IN_MEMORY: dict[tuple[int, ...], tuple[tuple[Phase, ...], ZoneTables]] = {}
-_MOST_IN_MEMORY = 8
+_MOST_IN_MEMORY = 24
 
 
 def zone_tables(phases: Sequence[Phase]) -> ZoneTables:
