@@ -34,6 +34,9 @@ TILT_DEG = 0.5
 """Standard uncertainty of the specimen's tilt off the zone about each axis where none is stated; a zone set by hand
 (common practice, no source)."""
 
+COMMON_SOURCES = ("reference spacing", "thermal expansion: coefficient", "thermal expansion: temperature")
+"""Lines of the budget that rows and columns share: they change the size of all lengths alike, and no angle."""
+
 _QUANTITIES = ("scale along rows", "scale along columns", "shear")
 _ONE_QUANTITY = ("scale",)
 
@@ -170,10 +173,17 @@ class MagnificationCheck:
 
     @property
     def pixel_size_relative_uncertainty(self) -> float | tuple[float, float]:
-        """Its relative standard uncertainty: a pair, or one number where only one factor is known."""
-        if self.shear is None:
-            return self.scale_uncertainty[0] / self.scale[0]
-        return self.scale_uncertainty[0] / self.scale[0], self.scale_uncertainty[1] / self.scale[1]
+        """Its relative standard uncertainty, as `Micrograph` has it.
+
+        One number where rows and columns mostly share their error, that of the reference and its temperature: the larger
+        one. A pair where most of it is their own.
+        """
+        row, column = (u / s for u, s in zip(self.scale_uncertainty, self.scale, strict=True))
+        budget = self.budgets[0]
+        common = sum(line.contribution**2 for line in budget.lines if line.source in COMMON_SOURCES)
+        if self.shear is None or common >= 0.5 * budget.standard_uncertainty**2:
+            return max(row, column)
+        return row, column
 
     @property
     def micrograph_shear(self) -> float:
@@ -192,7 +202,8 @@ class MagnificationCheck:
         shear = 0.0 if self.shear is None else self.shear * column / row
         matrix = np.array([[self.scale[0], 0.0], [shear, self.scale[1]]])
         angle = np.linspace(0, 2 * np.pi, points)
-        return np.stack([-np.sin(angle), np.cos(angle)], axis=1) @ matrix / d_nm
+        circle = np.stack([-np.sin(angle), np.cos(angle)], axis=1) / d_nm
+        return np.asarray(circle @ matrix, dtype=np.float64)
 
     def corrected(self, micrograph: Micrograph, source: str = "") -> Micrograph:
         """Return a picture with the true pixel size, its uncertainty and where it came from; the one given is kept.
