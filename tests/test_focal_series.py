@@ -1,4 +1,4 @@
-"""Combining a focal series, what it gains, and the defocus that disturbs a spacing least.
+"""Combining a focal series, and what it gains.
 
 The pictures of `tests/focal_series_pictures` come from a general multislice simulator (ase and abtem).
 """
@@ -13,13 +13,9 @@ from pathlib import Path
 import numpy as np
 import pytest
 import tifffile
-from hypothesis import given
-from hypothesis import strategies as st
 
-from conftest import handmade_peak
-from fringespan.beam import Lens, phase_contrast_transfer, signed_delocalisation_nm
 from fringespan.exceptions import CalibrationError, SettingsError
-from fringespan.focal_series import combine_focal_series, focal_series_gain, focus_advice, series_forecast
+from fringespan.focal_series import combine_focal_series, focal_series_gain, series_forecast
 from fringespan.measurement import measure
 from fringespan.micrograph import Micrograph
 from fringespan.region import Region
@@ -57,11 +53,11 @@ def test_less_than_one_picture_is_refused(count):
 # --- combining -----------------------------------------------------------------------------------------------------
 
 
-def test_each_part_of_the_uncertainty_gains_in_its_own_way(picture):
+def test_each_part_of_the_uncertainty_gains_in_its_own_way(picture, make_peak):
     spacings = [0.2350, 0.2352, 0.2354, 0.2356]
-    series = combine_focal_series([picture(handmade_peak(d, 30), defocus_nm=10.0 * i) for i, d in enumerate(spacings)])
+    series = combine_focal_series([picture(make_peak(d, 30), defocus_nm=10.0 * i) for i, d in enumerate(spacings)])
     (reflection,) = series.reflections
-    single = handmade_peak(0.2353, 30)
+    single = make_peak(0.2353, 30)
     assert reflection.used == 4
     assert reflection.effective_count == pytest.approx(4)
     assert reflection.d_nm == pytest.approx(0.2353)
@@ -75,42 +71,42 @@ def test_each_part_of_the_uncertainty_gains_in_its_own_way(picture):
     assert reflection.spread_nm == pytest.approx(np.std(spacings, ddof=1))
 
 
-def test_stronger_fringes_weigh_by_the_square_of_their_amplitude(picture):
-    strong, weak = handmade_peak(0.2350, 30, visibility=0.3), handmade_peak(0.2360, 30, visibility=0.1)
+def test_stronger_fringes_weigh_by_the_square_of_their_amplitude(picture, make_peak):
+    strong, weak = make_peak(0.2350, 30, visibility=0.3), make_peak(0.2360, 30, visibility=0.1)
     (reflection,) = combine_focal_series([picture(strong, defocus_nm=0.0), picture(weak, defocus_nm=20.0)]).reflections
     assert reflection.d_nm == pytest.approx(0.9 * 0.2350 + 0.1 * 0.2360)
     # (sum w)^2 / sum w^2 with weights 0.9 and 0.1
     assert reflection.effective_count == pytest.approx(1 / (0.81 + 0.01))
 
 
-def test_without_visibilities_amplitudes_weigh(picture):
-    peaks = (handmade_peak(0.2350, 30, visibility=None, amplitude=30.0), handmade_peak(0.2360, 30, amplitude=10.0))
+def test_without_visibilities_amplitudes_weigh(picture, make_peak):
+    peaks = (make_peak(0.2350, 30, visibility=None, amplitude=30.0), make_peak(0.2360, 30, amplitude=10.0))
     (reflection,) = combine_focal_series([picture(p) for p in peaks]).reflections
     assert reflection.d_nm == pytest.approx(0.9 * 0.2350 + 0.1 * 0.2360)
 
 
-def test_pictures_of_one_defocus_gain_nothing_on_the_crystals_part(picture):
-    series = combine_focal_series([picture(handmade_peak(0.2355, 30), defocus_nm=40.0) for _ in range(3)])
+def test_pictures_of_one_defocus_gain_nothing_on_the_crystals_part(picture, make_peak):
+    series = combine_focal_series([picture(make_peak(0.2355, 30), defocus_nm=40.0) for _ in range(3)])
     (reflection,) = series.reflections
     assert reflection.effective_count == 1
     assert reflection.d_crystal_uncertainty_nm == pytest.approx(reflection.single_crystal_uncertainty_nm)
     assert [c.code for c in series.cautions] == ["series-defocus-repeated"]
 
 
-def test_while_the_pixel_size_is_not_known_well_enough_no_whole_uncertainty_is_given(picture):
-    peaks = [handmade_peak(0.2355, 30, stated_uncertainty=None) for _ in range(2)]
+def test_while_the_pixel_size_is_not_known_well_enough_no_whole_uncertainty_is_given(picture, make_peak):
+    peaks = [make_peak(0.2355, 30, stated_uncertainty=None) for _ in range(2)]
     (reflection,) = combine_focal_series([picture(p, pixel_size_relative_uncertainty=None) for p in peaks]).reflections
     assert reflection.d_uncertainty_nm is None
     assert reflection.d_crystal_uncertainty_nm > 0
 
 
-def test_a_withheld_spacing_is_matched_but_not_used(picture):
+def test_a_withheld_spacing_is_matched_but_not_used(picture, make_peak):
     nothing = dict.fromkeys(("d_nm", "d_fit_uncertainty_nm", "d_crystal_uncertainty_nm", "d_uncertainty_nm"))
     series = combine_focal_series(
         [
-            picture(handmade_peak(0.2350, 30)),
-            picture(handmade_peak(0.2400, 30, withheld="broken", **nothing)),
-            picture(handmade_peak(0.2360, 30)),
+            picture(make_peak(0.2350, 30)),
+            picture(make_peak(0.2400, 30, withheld="broken", **nothing)),
+            picture(make_peak(0.2360, 30)),
         ]
     )
     (reflection,) = series.reflections
@@ -120,26 +116,26 @@ def test_a_withheld_spacing_is_matched_but_not_used(picture):
 
 
 @pytest.mark.parametrize(("shift", "same"), [(0.4, True), (0.9, False), (2.0, False)])
-def test_peaks_within_half_the_resolution_are_the_same_reflection(picture, shift, same):
+def test_peaks_within_half_the_resolution_are_the_same_reflection(picture, shift, same, make_peak):
     extent = 4.0  # smallest width of the crystal of these measurements, nm
     other = 1 / (1 / 0.2355 + shift / extent)
     sharp = {"d_fit_uncertainty_nm": 1e-6, "d_crystal_uncertainty_nm": 1e-6}
-    series = combine_focal_series([picture(handmade_peak(d, 30, **sharp)) for d in (0.2355, other)])
+    series = combine_focal_series([picture(make_peak(d, 30, **sharp)) for d in (0.2355, other)])
     assert bool(series.reflections) is same
     assert ("series-nothing-in-common" in [c.code for c in series.cautions]) is not same
 
 
-def test_a_reflection_keeps_its_identity_where_the_reported_sign_of_g_changes(picture):
-    series = combine_focal_series([picture(handmade_peak(0.2355, 89.95)), picture(handmade_peak(0.2355, 90.05))])
+def test_a_reflection_keeps_its_identity_where_the_reported_sign_of_g_changes(picture, make_peak):
+    series = combine_focal_series([picture(make_peak(0.2355, 89.95)), picture(make_peak(0.2355, 90.05))])
     assert len(series.reflections) == 1
-    across = combine_focal_series([picture(handmade_peak(0.2355, 0.1)), picture(handmade_peak(0.2355, 179.9))])
+    across = combine_focal_series([picture(make_peak(0.2355, 0.1)), picture(make_peak(0.2355, 179.9))])
     (reflection,) = across.reflections
     assert min(reflection.direction_deg, 180 - reflection.direction_deg) == pytest.approx(0, abs=1e-6)
 
 
-def test_reflections_are_told_apart_and_their_angle_is_the_pictures_mean(picture):
-    first = picture(handmade_peak(0.2355, 35.0), handmade_peak(0.2355, 144.8), handmade_peak(0.2039, 90))
-    second = picture(handmade_peak(0.2039, 90.1), handmade_peak(0.2355, 35.2), handmade_peak(0.2355, 145.2))
+def test_reflections_are_told_apart_and_their_angle_is_the_pictures_mean(picture, make_peak):
+    first = picture(make_peak(0.2355, 35.0), make_peak(0.2355, 144.8), make_peak(0.2039, 90))
+    second = picture(make_peak(0.2039, 90.1), make_peak(0.2355, 35.2), make_peak(0.2355, 145.2))
     series = combine_focal_series([first, second])
     assert {r.peaks for r in series.reflections} == {(0, 1), (1, 2), (2, 0)}
     by_pair = {frozenset(series.reflections[i].peaks for i in angle.peaks): angle for angle in series.angles}
@@ -148,16 +144,14 @@ def test_reflections_are_told_apart_and_their_angle_is_the_pictures_mean(picture
     assert angle.angle_uncertainty_deg == pytest.approx(0.09 * 2**-0.3)
 
 
-def test_what_is_seen_in_one_picture_only_is_left_out(picture):
-    series = combine_focal_series(
-        [picture(handmade_peak(0.2355, 35), handmade_peak(0.1, 80)), picture(handmade_peak(0.2355, 35))]
-    )
+def test_what_is_seen_in_one_picture_only_is_left_out(picture, make_peak):
+    series = combine_focal_series([picture(make_peak(0.2355, 35), make_peak(0.1, 80)), picture(make_peak(0.2355, 35))])
     assert [r.peaks for r in series.reflections] == [(0, 0)]
 
 
-def test_the_lattices_spacings_are_averaged_and_keep_the_pixel_sizes_part(picture):
+def test_the_lattices_spacings_are_averaged_and_keep_the_pixel_sizes_part(picture, make_peak):
     peaks = [
-        handmade_peak(0.2355, 30, d_lattice_nm=d, d_lattice_uncertainty_nm=math.hypot(2e-4, 0.2355 * 0.015))
+        make_peak(0.2355, 30, d_lattice_nm=d, d_lattice_uncertainty_nm=math.hypot(2e-4, 0.2355 * 0.015))
         for d in (0.2354, 0.2358)
     ]
     (reflection,) = combine_focal_series([picture(p) for p in peaks]).reflections
@@ -165,8 +159,8 @@ def test_the_lattices_spacings_are_averaged_and_keep_the_pixel_sizes_part(pictur
     assert reflection.d_lattice_uncertainty_nm == pytest.approx(math.hypot(2e-4 * 2**-0.3, 0.2355 * 0.015), rel=1e-5)
 
 
-def test_the_calmest_defocus_of_a_reflection_is_given_where_the_lens_is_known(picture):
-    peak = handmade_peak(0.2355, 30)
+def test_the_calmest_defocus_of_a_reflection_is_given_where_the_lens_is_known(picture, make_peak):
+    peak = make_peak(0.2355, 30)
     known = {"cs_mm": 1.0, "voltage_kv": 200.0}
     (reflection,) = combine_focal_series([picture(peak, **known), picture(peak, **known)]).reflections
     # Cs lambda^2 / d^2 with the published wavelength 2.5079 pm
@@ -183,35 +177,35 @@ def test_the_calmest_defocus_of_a_reflection_is_given_where_the_lens_is_known(pi
         (0.2369, {"defocus_nm": 30.0}, "series-spread"),
     ],
 )
-def test_what_is_said_of_a_doubtful_series(picture, second, known, code):
+def test_what_is_said_of_a_doubtful_series(picture, second, known, code, make_peak):
     sharp = {"d_fit_uncertainty_nm": 1e-4, "d_crystal_uncertainty_nm": 2e-4}
     series = combine_focal_series(
         [
-            picture(handmade_peak(0.2355, 30, **sharp), defocus_nm=0.0),
-            picture(handmade_peak(second, 30, **sharp), **known),
+            picture(make_peak(0.2355, 30, **sharp), defocus_nm=0.0),
+            picture(make_peak(second, 30, **sharp), **known),
         ]
     )
     assert [c.code for c in series.cautions] == [code]
 
 
-def test_nothing_is_said_of_a_sound_series(picture):
-    series = combine_focal_series([picture(handmade_peak(0.2355, 30), defocus_nm=d) for d in (0.0, 20.0, 40.0)])
+def test_nothing_is_said_of_a_sound_series(picture, make_peak):
+    series = combine_focal_series([picture(make_peak(0.2355, 30), defocus_nm=d) for d in (0.0, 20.0, 40.0)])
     assert series.cautions == ()
 
 
-def test_a_series_needs_two_pictures_with_pixel_sizes(picture, make_measurement):
+def test_a_series_needs_two_pictures_with_pixel_sizes(picture, make_measurement, make_peak):
     with pytest.raises(SettingsError, match="at least two"):
-        combine_focal_series([picture(handmade_peak(0.2355, 30))])
+        combine_focal_series([picture(make_peak(0.2355, 30))])
     without = make_measurement(Micrograph(np.ones((300, 300)), name="b.tif"), peaks=())
     with pytest.raises(CalibrationError, match=r"b\.tif.*no pixel size"):
-        combine_focal_series([picture(handmade_peak(0.2355, 30)), without])
+        combine_focal_series([picture(make_peak(0.2355, 30)), without])
 
 
 # --- advice --------------------------------------------------------------------------------------------------------
 
 
-def test_a_forecast_lowers_the_fit_faster_than_the_crystal():
-    peak = handmade_peak(0.2355, 30)
+def test_a_forecast_lowers_the_fit_faster_than_the_crystal(make_peak):
+    peak = make_peak(0.2355, 30)
     forecast = series_forecast(peak, 9)
     assert forecast.d_fit_uncertainty_nm == pytest.approx(peak.d_fit_uncertainty_nm / 3)
     assert forecast.d_crystal_uncertainty_nm == pytest.approx(peak.d_crystal_uncertainty_nm * 9**-0.3)
@@ -219,66 +213,6 @@ def test_a_forecast_lowers_the_fit_faster_than_the_crystal():
     assert series_forecast(dataclasses.replace(peak, d_uncertainty_nm=None), 9).d_uncertainty_nm is None
     with pytest.raises(SettingsError, match="must have a spacing"):
         series_forecast(dataclasses.replace(peak, d_nm=None), 9)
-
-
-def test_at_the_calmest_defocus_fringes_are_not_shifted():
-    advice = focus_advice(0.2355, 200, 1.0)
-    lens = Lens(voltage_kv=200, cs_mm=1.0, defocus_nm=advice.calmest_defocus_nm)
-    assert signed_delocalisation_nm(1 / 0.2355, lens) == pytest.approx(0, abs=1e-9)
-    # there chi = -pi Cs lambda^3 g^4 / 2
-    assert advice.calmest_transfer == pytest.approx(math.sin(-math.pi * 1e6 * 2.50793e-3**3 / 0.2355**4 / 2), rel=1e-3)
-    assert advice.defocus_nm == advice.calmest_defocus_nm
-    assert advice.delocalisation_nm == 0
-
-
-def test_without_spherical_aberration_contrast_vanishes_at_the_calmest_defocus_and_a_little_underfocus_brings_it_back():
-    advice = focus_advice(0.2, 300, 0.0)
-    assert advice.calmest_defocus_nm == 0
-    assert advice.calmest_transfer == 0
-    # sin(pi lambda df / d^2) = 1/2 at df = d^2 / (6 lambda)
-    assert advice.defocus_nm == pytest.approx(0.2**2 / (6 * 1.96875e-3), rel=1e-4)
-    assert abs(advice.transfer) == pytest.approx(0.5)
-    # lambda g df = d / 6
-    assert advice.delocalisation_nm == pytest.approx(0.2 / 6, rel=1e-6)
-
-
-@given(
-    st.floats(0.08, 0.5),
-    st.sampled_from([60.0, 200.0, 300.0]),
-    st.floats(-0.05, 3.0),
-    st.floats(0, 0.95),
-)
-def test_the_advised_defocus_is_the_nearest_with_the_wanted_transfer(d, voltage, cs, least):
-    advice = focus_advice(d, voltage, cs, least_transfer=least)
-    assert abs(advice.transfer) >= least - 1e-6
-    apart = abs(advice.defocus_nm - advice.calmest_defocus_nm)
-    for nearer in np.linspace(-0.99, 0.99, 41) * apart:
-        lens = Lens(voltage_kv=voltage, cs_mm=cs, defocus_nm=advice.calmest_defocus_nm + nearer)
-        if apart > 1e-6:
-            assert abs(float(phase_contrast_transfer(1 / d, lens))) < least + 1e-6
-
-
-def test_the_advice_compares_with_the_present_defocus():
-    far, near = (focus_advice(0.2355, 200, 1.0, defocus_nm=d).error_ratio for d in (0.0, 110.0))
-    assert far == pytest.approx(0.05 / math.hypot(0.05, 0.15), rel=1e-3)  # shifted by more than 1 nm
-    assert near == pytest.approx(1, abs=0.02)
-    assert focus_advice(0.2355, 200, 1.0).error_ratio is None
-
-
-@pytest.mark.parametrize(
-    ("arguments", "error"),
-    [
-        ({"least_transfer": 1.0}, SettingsError),
-        ({"least_transfer": -0.1}, SettingsError),
-        ({"d_nm": 0.0}, CalibrationError),
-        ({"d_nm": math.nan}, CalibrationError),
-        ({"voltage_kv": 0.1}, CalibrationError),
-        ({"cs_mm": 99.0}, CalibrationError),
-    ],
-)
-def test_impossible_wishes_are_refused(arguments, error):
-    with pytest.raises(error):
-        focus_advice(**({"d_nm": 0.2, "voltage_kv": 200.0, "cs_mm": 1.0} | arguments))
 
 
 # --- simulated particles with a known truth ------------------------------------------------------------------------

@@ -41,8 +41,8 @@ def test_the_whole_text_of_a_series(series):
             "            d   fit  crystal  of one  direction  pictures  calmest",
             "         (nm)   (%)      (%)     (%)      (deg)    (of 2)     (nm)",
             " 1  0.2355(3)  0.07     0.04    0.05   30.00(5)         2    113.4",
-            "  crystal: what the pictures together cannot show of an uneven crystal; of one: what one picture cannot.",
-            "  calmest: the underfocus at which the lens does not shift these fringes.",
+            "  crystal: what the pictures together cannot show of an uneven crystal; of one: what one picture",
+            "  cannot. calmest: the underfocus at which the lens does not shift these fringes.",
         ]
     )
 
