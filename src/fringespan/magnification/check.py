@@ -52,6 +52,8 @@ class CheckedReflection:
         Position in the measurement of the region.
     hkl : (int, int, int) or None
         None for a reference of one spacing, and where it is no reflection of the reference.
+    g_per_nm : (float, float)
+        Measured, (row, column), by the nominal pixel size.
     expected_d_nm : float or None
         Spacing of the reference at the specimen's temperature.
     nominal_d_nm : float
@@ -72,6 +74,7 @@ class CheckedReflection:
     region: str
     peak: int
     hkl: tuple[int, int, int] | None
+    g_per_nm: tuple[float, float]
     expected_d_nm: float | None
     nominal_d_nm: float
     corrected_d_nm: float | None
@@ -608,6 +611,7 @@ def _reflections(
                 **about,
                 peak=assigned.peak,
                 hkl=assigned.hkl,
+                g_per_nm=(float(own.g_per_nm[0]), float(own.g_per_nm[1])),
                 expected_d_nm=expected,
                 nominal_d_nm=1 / math.hypot(*own.g_per_nm),
                 corrected_d_nm=corrected,
@@ -622,6 +626,7 @@ def _reflections(
                 **about,
                 peak=peak,
                 hkl=None,
+                g_per_nm=(float(own.g_per_nm[0]), float(own.g_per_nm[1])),
                 expected_d_nm=None,
                 nominal_d_nm=1 / math.hypot(*own.g_per_nm),
                 corrected_d_nm=1 / math.hypot(*(inverse @ own.g_per_nm)),
