@@ -1,4 +1,7 @@
-"""What to say about a region as a whole: each rule with its own text and remedy."""
+"""What to say about a region as a whole: each rule with its own text and remedy.
+
+The articles named in the texts are cited from memory.
+"""
 
 from __future__ import annotations
 
@@ -83,7 +86,8 @@ SMALL_CRYSTAL = Caution(
     "warning",
     "Small crystals deceive: off a zone axis their fringe spacings differ from the lattice by up to several per cent, and "
     "bend or split in a perfect crystal (Malm & O'Keefe, Ultramicroscopy 68 (1997) 13); one picture does not show a tilt.",
-    "Measure several particles, and take d from the lattice; with voltage, Cs and defocus given, the lens is counted in.",
+    "Measure several particles, and take d from the lattice; with voltage, Cs and defocus given the lens is counted in, and "
+    "pictures at two tilts show the tilt (Qin & Fraundorf, Ultramicroscopy 94 (2003) 245).",
 )
 
 PIXEL_SIZE_NOT_STATED = Caution(
