@@ -36,7 +36,9 @@ def same_lattice(first, second):
 
 def lattice_of(g, sigma, strength=None):
     n = len(g)
-    return find_lattice(g, np.full(n, sigma), np.full(n, sigma), np.linspace(50, 20, n) if strength is None else strength)
+    return find_lattice(
+        g, np.full(n, sigma), np.full(n, sigma), np.linspace(50, 20, n) if strength is None else strength
+    )
 
 
 INDICES = [
@@ -167,7 +169,7 @@ def test_peaks_that_span_no_plane_have_no_lattice(g):
     assert lattice_of(np.array(g).reshape(-1, 2), 1e-3) is None
 
 
-# --- points -------------------------------------------------------------------------------------------------------------
+# --- points ----------------------------------------------------------------------------------------------------------
 
 
 @given(basis=reduced_cells(), longest=st.floats(1.0, 25.0))
@@ -184,7 +186,7 @@ def test_lattice_points_are_one_of_each_opposite_pair_up_to_a_length(basis, long
     assert 2 * len(got) == len(expected)
 
 
-# --- combinations -------------------------------------------------------------------------------------------------------
+# --- combinations ----------------------------------------------------------------------------------------------------
 
 COMBINED = [
     pytest.param([(1, 0), (0, 1), (1, 1)], [9, 8, 3], [None, None, (0, 1)], id="sum"),
@@ -207,7 +209,7 @@ def test_peaks_off_the_lattice_make_no_combinations():
     assert combinations(np.array([(1, 0), (0, 1), (1, 1)]), member, np.array([9.0, 8.0, 3.0])) == [None, None, None]
 
 
-# --- in nm ----------------------------------------------------------------------------------------------------------------
+# --- in nm -----------------------------------------------------------------------------------------------------------
 
 
 @given(

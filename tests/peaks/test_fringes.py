@@ -2,6 +2,8 @@
 
 import numpy as np
 import pytest
+
+from fringespan.peaks.fringes import find_fringes
 from simulated_fringes import (
     Wave,
     blurred,
@@ -16,8 +18,6 @@ from simulated_fringes import (
     transfer_rings,
     white,
 )
-
-from fringespan.peaks.fringes import find_fringes
 
 SHAPE = (128, 128)
 
@@ -43,7 +43,7 @@ def turned(g, separation_bins, rng, shape=SHAPE):
     return tuple(np.array(g) + separation_bins / min(shape) * np.array([np.sin(angle), np.cos(angle)]))
 
 
-# --- several fringes ---------------------------------------------------------------------------------------------------
+# --- several fringes -------------------------------------------------------------------------------------------------
 
 
 def equal_pair(separation):
@@ -73,7 +73,9 @@ def net(rng):
     a = length * np.array([np.sin(turn), np.cos(turn)])
     turn += rng.uniform(1.0, 1.6)
     b = length * rng.uniform(0.8, 1.2) * np.array([np.sin(turn), np.cos(turn)])
-    return [Wave(tuple(g), m, rng.uniform(0, 6)) for g, m in zip((a, b, a + b, a - b), (0.8, 0.7, 0.5, 0.4), strict=True)]
+    return [
+        Wave(tuple(g), m, rng.uniform(0, 6)) for g, m in zip((a, b, a + b, a - b), (0.8, 0.7, 0.5, 0.4), strict=True)
+    ]
 
 
 def many(rng):
@@ -113,7 +115,7 @@ def test_every_fringe_is_found_once_and_nothing_else(draw, density, pictures):
     assert extra <= 2
 
 
-# --- the noise beside them ---------------------------------------------------------------------------------------------
+# --- the noise beside them -------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("density", [white, falling, blurred])
@@ -175,7 +177,7 @@ def test_noise_alone_shows_no_fringe(make, mask, pictures):
     assert false <= expected + 2.33 * np.sqrt(expected) + 0.5
 
 
-# --- fringes that are no plane wave ------------------------------------------------------------------------------------
+# --- fringes that are no plane wave ----------------------------------------------------------------------------------
 
 
 def bent(wave, shape, cycles):

@@ -4,10 +4,10 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from simulated_fringes import Wave, cramer_rao_bound, ellipse_mask, fringes, noise, places, prepared, random_g
 
 from fringespan.peaks.demodulation import demodulate
 from fringespan.peaks.joint_fit import fit_jointly
+from simulated_fringes import Wave, cramer_rao_bound, ellipse_mask, fringes, noise, places, prepared, random_g
 
 
 def fitted(picture, start, density=1.0, threshold=10.0):
@@ -21,7 +21,7 @@ def complex_amplitude(wave):
     return wave.amplitude / 2 * np.exp(1j * wave.phase)
 
 
-# --- without noise ----------------------------------------------------------------------------------------------------
+# --- without noise ---------------------------------------------------------------------------------------------------
 
 
 @settings(max_examples=60)
@@ -61,7 +61,7 @@ def test_several_waves_without_noise_are_all_found_exactly(data):
     assert fit.amplitude == pytest.approx(np.array([complex_amplitude(w) for w in waves]), abs=0.05)
 
 
-# --- in noise ---------------------------------------------------------------------------------------------------------
+# --- in noise --------------------------------------------------------------------------------------------------------
 
 ONE = [
     pytest.param((64, 64), False, id="square"),
