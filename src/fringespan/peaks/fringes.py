@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from functools import partial
 
+import numba
 import numpy as np
 from numpy.typing import NDArray
 
@@ -124,10 +125,18 @@ def _distances(
     footprint: Footprint, frequency: NDArray[np.float64], others: NDArray[np.float64]
 ) -> NDArray[np.float64]:
     """Return the distance in bins of each frequency from each other one or its opposite, shape (n, m)."""
-    bins = np.array(footprint.shape)
-    difference = np.hypot(*((frequency[:, None] - others[None]) * bins).transpose(2, 0, 1))
-    total = np.hypot(*((frequency[:, None] + others[None]) * bins).transpose(2, 0, 1))
-    return np.asarray(np.minimum(difference, total))
+    out = np.empty((len(frequency), len(others)))
+    _fill_distances(*footprint.shape, frequency, others, out)
+    return out
+
+
+@numba.njit(cache=True, nogil=True)
+def _fill_distances(ny, nx, frequency, others, out):  # type: ignore[no-untyped-def]
+    for j in range(frequency.shape[0]):
+        for k in range(others.shape[0]):
+            difference = np.hypot((frequency[j, 0] - others[k, 0]) * ny, (frequency[j, 1] - others[k, 1]) * nx)
+            total = np.hypot((frequency[j, 0] + others[k, 0]) * ny, (frequency[j, 1] + others[k, 1]) * nx)
+            out[j, k] = min(difference, total)
 
 
 def _near_stronger(
