@@ -129,7 +129,8 @@ def import_table(table: str, file: str | None) -> None:
     from fringespan.exceptions import RecordError
 
     try:
-        text = Path(table).read_text(encoding="utf-8-sig")
+        with open(table, encoding="utf-8-sig", newline="") as source:
+            text = source.read()
     except UnicodeDecodeError:
         raise RecordError(f"{table}: not a text in UTF-8; save the table as CSV in UTF-8") from None
     with _opened(file, new=True) as book:

@@ -146,8 +146,9 @@ def fit_geometry(
     Notes
     -----
     Reflections that lie off the fit of the others are left out of it one by one, the worst first, and returned as not
-    used; where more than a quarter do, all stay. If those used scatter more than chi square allows at 5 %, the uncertainty is raised by the root of chi square
-    over the degrees of freedom (R. T. Birge, Phys. Rev. 40 (1932) 207, from memory).
+    used; where more than a quarter do, all stay. If those used scatter more than chi square allows at 5 %, the
+    uncertainty is raised by the root of chi square over the degrees of freedom (R. T. Birge, Phys. Rev. 40 (1932) 207, from
+    memory).
     """
     rows = [
         _Row(

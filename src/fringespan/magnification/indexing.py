@@ -127,12 +127,18 @@ def observed_peaks(measurement: Measurement) -> tuple[ObservedPeak, ...]:
             ObservedPeak(
                 g_per_nm=np.asarray(peak.g_per_nm, dtype=np.float64),
                 fit_covariance=fit,
-                crystal_covariance=np.asarray(reflection.covariance_per_nm2) - fit,
+                crystal_covariance=_not_negative(np.asarray(reflection.covariance_per_nm2) - fit),
                 withheld=peak.withheld,
                 signal_to_noise=float(peak.signal_to_noise),
             )
         )
     return tuple(peaks)
+
+
+def _not_negative(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return a covariance without the negative variances that rounding leaves of a difference."""
+    values, vectors = np.linalg.eigh((matrix + matrix.T) / 2)
+    return np.asarray((vectors * np.maximum(values, 0.0)) @ vectors.T, dtype=np.float64)
 
 
 def _observation(measurement: Measurement) -> Observation:
