@@ -106,6 +106,14 @@ def test_a_logged_check_corrects_later_pictures_and_they_say_so(run, own_log, tm
     assert read_record(tmp_path / "o.json").picture.pixel_size_nm == (0.025, 0.025)
 
 
+def test_the_log_keeps_when_the_pictures_were_taken(run):
+    run("check", SAMPLE, "--reference", "gold", "--log", "own", "--date", "2024-05-06T07:08:09+00:00")
+    (entry,) = json.loads(run("log", "list", "--json", "-").stdout)["entries"]
+    assert entry["checked_at"] == "2024-05-06T07:08:09+00:00"
+    assert json.loads(entry["details"])["reference"] == "au"
+    assert run("check", SAMPLE, "--reference", "gold", "--date", "May").exit_code == 2
+
+
 def test_a_withdrawn_check_is_not_applied(run, own_log):
     run("check", SAMPLE, "--reference", "gold", "--log", "own")
     assert run("log", "withdraw", 1, "--because", "wrong specimen").exit_code == 0
