@@ -182,18 +182,21 @@ def test_report_as_pdf(run, tmp_path):
     assert content.count(b"/Type /Page\n") + content.count(b"/Type /Page ") >= 3
 
 
-def test_one_region_calibrates_the_other(run):
+def test_one_region_calibrates_the_other(run, tmp_path):
     """Two halves of the same foil: the mismatch is zero although the pixel size is wrong."""
     result = run(
         "check", SAMPLE, "--reference", "gold", "--standard", "left", "--region", "left: 0,0 0,250 511,250 511,0",
-        "--region", "right: 0,261 0,511 511,511 511,261",
+        "--region", "right: 0,261 0,511 511,511 511,261", "--json", tmp_path / "r.json",
     )  # fmt: skip
     assert result.exit_code == 0
     assert "Mismatch against Gold in the same picture" in result.stdout
     rows = [line.split() for line in result.stdout[result.stdout.index("Mismatch") :].splitlines() if "right" in line]
     assert len(rows) >= 4
-    for row in rows[:2]:
-        assert abs(float(row[-1].partition("(")[0])) < 0.1
+    found = read_record(tmp_path / "r.json").magnification["mismatches"]
+    assert len(found) == len(rows)
+    for mismatch in found:
+        assert abs(mismatch["mismatch_percent"]) < 4 * mismatch["mismatch_uncertainty_percent"]
+    assert abs(found[0]["mismatch_percent"]) < 0.1
 
 
 WRONG = [

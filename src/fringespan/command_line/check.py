@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any, cast
 
 import click
 
+from fringespan.command_line import complain
 from fringespan.command_line.output_options import (
     STANDARD_OUTPUT,
     OutputOptions,
@@ -27,6 +28,7 @@ if TYPE_CHECKING:
     from fringespan.magnification.budget import Acceptance, Coverage
     from fringespan.magnification.check import MagnificationCheck
     from fringespan.magnification.conditions import Conditions
+    from fringespan.magnification.internal_standard import InternalStandard
     from fringespan.magnification.log import LogEntry
     from fringespan.magnification.reference import ReferenceSpacing
     from fringespan.measurement import Measurement
@@ -158,6 +160,8 @@ def check(
 
     _refuse_impossible(report, output, images)
     moment = _moment(date)
+    if picture.phases.strip().lower() != "none":
+        complain("--phases plays no part in a check; --reference names the material", "fringespan check")
     conditions = _conditions(about, picture)
     chosen, uncertainty = _chosen_reference(reference, reference_uncertainty)
     pictures: list[list[Measurement]] = []
@@ -182,8 +186,9 @@ def check(
         acceptance=cast("Acceptance", acceptance),
         coverage=cast("Coverage", coverage),
     )
-    _print(result, conditions, chosen, pictures, standard, temperature, output)
-    _write(result, pictures, images, output)
+    inside = [] if standard is None else _measured_by_standard(pictures, standard, chosen, temperature)
+    _print(result, conditions, inside, output)
+    _write(result, pictures, images, inside, output)
     if report is not None:
         from fringespan.export.check_report import CheckReport, write_check_report
 
@@ -242,14 +247,26 @@ def _chosen_reference(
         raise click.UsageError(str(problem), click.get_current_context()) from problem
 
 
-def _print(
-    result: MagnificationCheck,
-    conditions: Conditions,
-    reference: Phase | ReferenceSpacing,
+def _measured_by_standard(
     pictures: Sequence[Sequence[Measurement]],
-    standard: str | None,
+    standard: str,
+    reference: Phase | ReferenceSpacing,
     temperature: float | None,
-    output: OutputOptions,
+) -> list[InternalStandard]:
+    """Return the other regions of each picture, measured by the one of that name."""
+    from fringespan.magnification.internal_standard import calibrate_within_picture
+
+    found = []
+    for group in pictures:
+        own = [m for m in group if m.region.name == standard]
+        others = [m for m in group if m.region.name != standard]
+        if own and others:
+            found.append(calibrate_within_picture(own[0], reference, others, temperature_c=temperature))
+    return found
+
+
+def _print(
+    result: MagnificationCheck, conditions: Conditions, inside: Sequence[InternalStandard], output: OutputOptions
 ) -> None:
     if output.to_standard_output:
         return
@@ -257,18 +274,12 @@ def _print(
     from fringespan.export.check_text import check_lines, internal_standard_lines
     from fringespan.export.log_text import conditions_text
     from fringespan.export.plain_text import Line, paragraph
-    from fringespan.magnification.internal_standard import calibrate_within_picture
 
     width = text_width()
     lines = check_lines(result, width)
     lines += paragraph(conditions_text(conditions), width, first="  conditions: ", emphasis="quiet")
-    if standard is not None:
-        for group in pictures:
-            own = [m for m in group if m.region.name == standard]
-            others = [m for m in group if m.region.name != standard]
-            if own and others:
-                inside = calibrate_within_picture(own[0], reference, others, temperature_c=temperature)
-                lines += [Line(""), *internal_standard_lines(inside, width)]
+    for one in inside:
+        lines += [Line(""), *internal_standard_lines(one, width)]
     print_lines(lines)
 
 
@@ -276,14 +287,17 @@ def _write(
     result: MagnificationCheck,
     pictures: Sequence[Sequence[Measurement]],
     images: Sequence[str],
+    inside: Sequence[InternalStandard],
     output: OutputOptions,
 ) -> None:
     from fringespan.export.check_text import reflection_table
     from fringespan.export.table import csv_text
-    from fringespan.record import document_of, json_text, magnification_values, record_of
+    from fringespan.record import document_of, json_text, magnification_values, plain_values, record_of
 
     if output.json is not None:
         values = magnification_values(result)
+        if inside:
+            values["mismatches"] = plain_values([m for one in inside for m in one.mismatches], "mismatches")
         documents = [document_of(record_of(group, magnification=values)) for group in pictures]
         files = _one_file_a_picture(output.json, images)
         for document, file in zip(documents, files, strict=False):
