@@ -69,6 +69,8 @@ class CrystalFringes:
         Half the real amplitude, with the phase at `phase_origin`.
     phase_origin : (float, float)
         (row, column) from the first pixel of the region's rectangle.
+    mean_level : float
+        Mean pixel value inside the crystal.
     misfit : ndarray, shape (n,)
         See `fringespan.peaks.misfit`.
     crystal_along, crystal_across : ndarray, shape (n,)
@@ -103,6 +105,7 @@ class CrystalFringes:
     density: NDArray[np.float64]
     amplitude: NDArray[np.complex128]
     phase_origin: tuple[float, float]
+    mean_level: float
     misfit: NDArray[np.float64]
     crystal_along: NDArray[np.float64]
     crystal_across: NDArray[np.float64]
@@ -403,7 +406,7 @@ def _assembled(
     )
     order = np.argsort(-fit.power_ratio)
     middle = scene.corner[0] + (ny - 1) / 2, scene.corner[1] + (nx - 1) / 2
-    drawn, extent = _outline(scene, fields, middle, size)
+    drawn, extent, mean_level = _outline(scene, fields, middle, size)
     pairs = np.stack([2 * order, 2 * order + 1], axis=1).ravel()
     second = _second_lattice(moved, lattice, size)
     return CrystalFringes(
@@ -413,6 +416,7 @@ def _assembled(
         density=scene.fringes.density[order],
         amplitude=amplitude[order],
         phase_origin=middle,
+        mean_level=mean_level,
         misfit=misfit[order],
         crystal_along=along[order],
         crystal_across=across[order],
@@ -552,20 +556,26 @@ def _second_lattice(scene: _Scene, first: LatticeFit | None, size: NDArray[np.fl
 
 def _outline(
     scene: _Scene, fields: FringeField | None, middle: tuple[float, float], size: NDArray[np.float64]
-) -> tuple[NDArray[np.float64] | None, tuple[float, float] | None]:
-    """Return the crystal's outline from the region's first pixel, and its greatest and smallest width."""
+) -> tuple[NDArray[np.float64] | None, tuple[float, float] | None, float]:
+    """Return the crystal's outline from the region's first pixel, its greatest and smallest width, and its mean pixel."""
     power_ratio = scene.fringes.fit.power_ratio
+    trend = scene.pixels.trend
+    mean = float(trend[0] + (trend[2] + trend[7]) / 3)
     if not len(power_ratio):
-        return None, None
+        return None, None, mean
     if fields is None:
         corners = _corners(scene.footprint) + scene.corner
     else:
         used = power_ratio > min(_CLEAR, power_ratio.max() * 0.99)
         part = replace(fields, field=fields.field[used], width_px=fields.width_px[used])
-        corners = outline(part, crystal_mask(part, np.sqrt(power_ratio[used]))) + middle
+        mask = crystal_mask(part, np.sqrt(power_ratio[used]))
+        corners = outline(part, mask) + middle
+        filled, (top, left) = crystal_footprint(scene.footprint, part, mask)
+        values = scene.pixels.values[top : top + filled.shape[0], left : left + filled.shape[1]]
+        mean = float(values[filled.mask].mean(dtype=np.float64))
     along = (corners * size) @ _DIRECTIONS
     widths = along.max(axis=0) - along.min(axis=0)
-    return corners, (float(widths.max()), float(widths.min()))
+    return corners, (float(widths.max()), float(widths.min())), mean
 
 
 def _corners(footprint: Footprint) -> NDArray[np.float64]:

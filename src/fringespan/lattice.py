@@ -248,7 +248,7 @@ def _score(basis, g, unit, sigma_along, sigma_across, index, member):  # type: i
         highest = max(abs(a), abs(b))
         if chi2 < 12 and 0 < highest <= _HIGHEST_INDEX:
             member[k] = True
-            gain = np.log(abs(cell) / (2 * np.pi * sigma_along[k] * sigma_across[k])) - chi2 / 2
+            gain = np.log(abs(cell) / (2 * np.pi * sigma_along[k] * sigma_across[k] * grown**2)) - chi2 / 2
             if gain > 0:
                 total += gain
                 # two peaks always fit a basis made for them: the two that gain most do not count
