@@ -46,10 +46,11 @@ def turned(g, separation_bins, rng, shape=SHAPE):
 # --- several fringes -------------------------------------------------------------------------------------------------
 
 
-def equal_pair(separation):
+def equal_pair(separation, amplitude=0.5):
     def draw(rng):
         g = random_g(rng, SHAPE, 0.36)
-        return [Wave(g, 0.5, rng.uniform(0, 6)), Wave(turned(g, separation, rng), 0.5, rng.uniform(0, 6))]
+        other = turned(g, separation, rng)
+        return [Wave(g, amplitude, rng.uniform(0, 6)), Wave(other, amplitude, rng.uniform(0, 6))]
 
     return draw
 
@@ -91,6 +92,7 @@ SCENES = [
     pytest.param(equal_pair(1.8), white, 40, id="equal pair 1.8 bins apart"),
     pytest.param(equal_pair(2.5), white, 40, id="equal pair 2.5 bins apart"),
     pytest.param(equal_pair(5.0), white, 40, id="equal pair 5 bins apart"),
+    pytest.param(equal_pair(2.5, 5.0), white, 80, id="strong equal pair 2.5 bins apart"),
     pytest.param(weak_beside_strong(20, 6), white, 40, id="1 beside 20, 6 bins away"),
     pytest.param(weak_beside_strong(100, 12), white, 40, id="1 beside 100, 12 bins away"),
     pytest.param(with_harmonic, white, 40, id="second order"),
