@@ -235,6 +235,19 @@ def test_grains_of_a_phase_find_their_place_on_its_ladder_of_spacings():
     assert families == [3, 4, 8, 11, 3, 4, 8, 3]
 
 
+@pytest.mark.parametrize("seed", range(6))
+def test_many_grains_in_one_region(seed):
+    """The whole of a polycrystalline picture as one region: spots of many crystals on the rings of the reference."""
+    rng = np.random.default_rng(seed)
+    true = geometry(1.03, 1.05, 0.01)
+    lengths = [GOLD.lengths_nm[0] / math.sqrt(n) for n in (3, 4, 8)]
+    regions = grains(true, rng.choice(lengths, 12), rng.uniform(0, 180, 12), seed=seed)
+    one = region_measurement(picture(), [m.peaks[0] for m in regions], "all")
+    check = check_magnification(one, GOLD, reference_relative_uncertainty=0.0, **AT_25)
+    assert_recovers(check, true)
+    assert sum(r.used for r in check.reflections) >= 10
+
+
 def test_one_set_of_fringes_gives_one_factor_and_says_so():
     check = check_magnification(
         grains(geometry(1.02, 1.02), 0.3400, [25.0]), ReferenceSpacing(0.34, 0.005), temperature_c=22.5

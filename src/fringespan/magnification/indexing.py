@@ -36,6 +36,9 @@ prior lets distorted patterns of other zones in, and more checks end undecided."
 _KNOWN_SCALE_SIGMA = 0.006
 _SAME_SCALE = 0.01
 _DECISIVE = 0.95
+_LEAST_SHARE = 0.6
+"""Of a region's strong peaks, for them to count as one crystal's."""
+
 _NEAR = 0.02
 """A peak within 2 % of a reflection is shown with it, even where it lies too far off to be used."""
 
@@ -226,6 +229,8 @@ def _pattern(observation: Observation, phase: Phase, scale: float | None) -> _Pa
     alike = np.abs(scales / scales[best] - 1) < _SAME_SCALE
     certainty = float(weight[alike].sum() / weight.sum())
     number = int((comparison.node[best] >= 0).sum())
+    if number < _LEAST_SHARE * len(comparison.peaks):
+        return None  # several grains in one region: compared by their lengths
     # two vectors always fit some pair of reflections: three check each other
     return _Pattern(comparison, float(scales[best]), certainty if number >= 3 else 0.0)
 
