@@ -554,9 +554,9 @@ def regions(draw):
 
 @st.composite
 def calibrations(draw):
-    size = draw(st.none() | st.floats(0.005, 0.5) | st.tuples(st.floats(0.005, 0.5), st.floats(0.005, 0.5)))
+    size, aspect = draw(st.none() | st.floats(0.005, 0.5)), draw(st.floats(0.4, 2.5))
     return {
-        "pixel_size_nm": size,
+        "pixel_size_nm": None if size is None else (size, size * aspect),
         "pixel_size_relative_uncertainty": draw(st.sampled_from([None, 0.01, (0.01, 0.02), 0.0])),
         "shear": draw(st.sampled_from([0.0, 0.2])),
         "voltage_kv": draw(st.sampled_from([None, 80.0, 300.0])),
@@ -581,6 +581,24 @@ def test_whatever_the_picture_only_a_refusal_or_a_sound_result_comes_out(pixels,
 )
 def test_whatever_the_pixel_values_only_a_refusal_or_a_sound_result_comes_out(pixels):
     only_a_refusal_comes_out(lambda: measure(Micrograph(pixels)))
+
+
+@pytest.mark.parametrize("pixel_size", [(0.08, 0.01), (0.01, 0.08)])
+def test_pixels_may_be_very_oblong(pixel_size):
+    is_sound(measure(Micrograph(noise(np.random.default_rng(6), (40, 40)) + 20, pixel_size_nm=pixel_size)))
+
+
+RAMPS = [
+    pytest.param((40, 24), np.float32, 27.6, 1.0, id="rounded by single precision"),
+    pytest.param((202, 24), np.uint64, 398.4294901814619, 0.5, id="rounded to whole numbers, oblong pixels"),
+]
+
+
+@pytest.mark.parametrize(("shape", "dtype", "slope", "aspect"), RAMPS)
+def test_a_ramp_without_noise_shows_its_rounding_at_most(shape, dtype, slope, aspect):
+    row, column = np.indices(shape)
+    ramp = ((row + column) * slope + 398429.4904181619).astype(dtype)
+    is_sound(measure(Micrograph(ramp, pixel_size_nm=(0.02, 0.02 * aspect))))
 
 
 @pytest.mark.parametrize("dtype", [bool, complex, "S3", object])
@@ -641,6 +659,19 @@ def test_the_lattice_gives_every_peak_an_index_and_a_second_spacing():
     # 0.1, 0.32 is the sum of the two stronger ones
     assert got.peaks[2].combination_of == (0, 1)
     assert got.peaks[0].combination_of is None
+
+
+def test_spacings_from_the_lattice_scatter_no_more_than_they_say():
+    errors = []
+    for seed in range(50):
+        exact = Micrograph(picture(seed), pixel_size_nm=0.02, pixel_size_relative_uncertainty=0.0)
+        for peak in measure(exact).peaks:
+            wave = min(WAVES, key=lambda w: min(np.abs(peak.g_per_px - w.g).max(), np.abs(peak.g_per_px + w.g).max()))
+            if peak.d_lattice_nm is not None:
+                errors.append((peak.d_lattice_nm - 0.02 / math.hypot(*wave.g)) / peak.d_lattice_uncertainty_nm)
+    assert len(errors) >= 140
+    # on the wide side: the lens may still do what a whole field does not show
+    assert 0.1 < np.mean(np.square(errors)) < 1.4
 
 
 def test_two_peaks_make_no_lattice():
@@ -813,11 +844,21 @@ def test_a_whole_field_shows_every_visible_reflection_right(path, truth, region)
 
 
 @pytest.mark.parametrize(("path", "truth", "region"), truths("field"))
-def test_the_common_lattice_of_a_whole_field_holds_every_visible_reflection(path, truth, region):
+def test_the_common_lattice_of_a_whole_field_holds_every_visible_reflection(path, truth, region, request):
+    if "field_nio_110" in str(path):
+        # few weak half orders do not outweigh a lattice of half the cell: they stay off it and are called a superlattice
+        request.node.add_marker(pytest.mark.xfail(strict=True, reason="weak half orders of odd layers stay off the lattice"))
     pairs, _, measurement = compared(path, truth, region)
     assert measurement.lattice is not None
     for reflection, peak in pairs:
         assert peak.d_lattice_nm == pytest.approx(reflection["d_nm"], rel=3e-4)
+
+
+@pytest.mark.parametrize(("path", "truth", "region"), truths("field"))
+def test_on_a_whole_field_the_crystal_adds_no_more_than_twice_what_the_noise_does(path, truth, region):
+    pairs, _, _ = compared(path, truth, region)
+    share = [peak.d_crystal_uncertainty_nm / peak.d_fit_uncertainty_nm for _, peak in pairs]
+    assert math.sqrt(np.mean(np.square(share))) <= 2
 
 
 def test_whole_fields_show_next_to_nothing_else():

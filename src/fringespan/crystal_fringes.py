@@ -490,7 +490,7 @@ def _uncertainties(
         scatter = 0.0
         if residual is not None and member.sum() >= 3:
             scatter = lattice_scatter(residual[member], (noise * length)[member], np.full(int(member.sum()), 0.002))
-        along = np.minimum(np.full(n, 1.5 * scatter), np.maximum(2 * noise * length, 1.5 * scatter))
+        along = np.minimum(1.5 * scatter, 2 * noise * length)
         across, floor = 0.25 * along, 0.0
     # direction of g in pixels differs from that in nm by the pixel's aspect only, which these rough terms can ignore
     norm = np.sqrt((g * g).sum(axis=1))
