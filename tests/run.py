@@ -60,11 +60,17 @@ def main() -> int:
         return _stop(f"the environment could not be made: {' '.join(map(str, failure.cmd))} failed")
     # the names of the markers are those of pyproject.toml
     selected = [] if options.slow else ["-m", "not slow"]
-    return subprocess.run([python, "-m", "pytest", *selected, *for_pytest], cwd=CHECKOUT, check=False).returncode
+    # two processes share the work unless pytest is told otherwise
+    spread = [] if any(a == "-n" or a.startswith("-n") for a in for_pytest) else ["-n", "2"]
+    return subprocess.run(
+        [python, "-m", "pytest", *spread, *selected, *for_pytest], cwd=CHECKOUT, check=False
+    ).returncode
 
 
 def _arguments() -> tuple[argparse.Namespace, list[str]]:
-    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter, allow_abbrev=False
+    )
     parser.add_argument("--slow", action="store_true", help="run the slow tests too")
     parser.add_argument(
         "--install-system-packages", action="store_true", help="install missing Debian packages (needs root or sudo)"

@@ -266,7 +266,9 @@ def test_bent_fringes_are_broken_or_honestly_uncertain(cycles):
     [
         0.5,
         # the region splits into two peaks beside the true one, each a fair plane wave of its part
-        pytest.param(0.35, marks=pytest.mark.xfail(strict=True, reason="8 of 10 such discs give a wrong spacing unflagged")),
+        pytest.param(
+            0.35, marks=pytest.mark.xfail(strict=True, reason="8 of 10 such discs give a wrong spacing unflagged")
+        ),
     ],
 )
 def test_contrast_that_reverses_towards_the_rim_gives_no_spacing_or_an_honest_one(share):

@@ -847,7 +847,9 @@ def test_a_whole_field_shows_every_visible_reflection_right(path, truth, region)
 def test_the_common_lattice_of_a_whole_field_holds_every_visible_reflection(path, truth, region, request):
     if "field_nio_110" in str(path):
         # few weak half orders do not outweigh a lattice of half the cell: they stay off it and are called a superlattice
-        request.node.add_marker(pytest.mark.xfail(strict=True, reason="weak half orders of odd layers stay off the lattice"))
+        request.node.add_marker(
+            pytest.mark.xfail(strict=True, reason="weak half orders of odd layers stay off the lattice")
+        )
     pairs, _, measurement = compared(path, truth, region)
     assert measurement.lattice is not None
     for reflection, peak in pairs:

@@ -33,6 +33,9 @@ __all__ = [
 
 _TAPER_REACH = 0.9
 
+_BROKEN_PHASE, _BROKEN_SHARE, _BROKEN_SPREAD = 0.5, 0.15, 0.25
+"""Phase departure in rad, share of the region, and spread in cycles beyond which fringes are broken."""
+
 _BENT_PHASE = 0.2
 """Phase departure in rad, RMS, from which the halves of a crystal are compared."""
 
@@ -196,8 +199,8 @@ def _extent_along(mask, y, x, ny, nx):  # type: ignore[no-untyped-def]
 
 
 @numba.njit(cache=True, nogil=True)
-def _features(field, amplitude, weight, mask, y, x, shift):  # type: ignore[no-untyped-def]
-    """Return the weighted RMS phase about the fitted wave in the mask, and the amplitude's centre in units of its spread."""
+def _phase_rms(field, amplitude, weight, mask, y, x, shift):  # type: ignore[no-untyped-def]
+    """Return the weighted RMS phase about the fitted wave in the mask."""
     mean = 0j
     for i in range(y.size):
         for j in range(x.size):
@@ -294,7 +297,7 @@ def fit_crystal(
             amplitude, fields.inside
         )
         noise /= max(amplitude[mask].mean(), 1e-30)
-        phase[k] = np.sqrt(max(_features(field, amplitude, weight, mask, y, x, shift[k]) ** 2 - noise**2, 0.0))
+        phase[k] = np.sqrt(max(_phase_rms(field, amplitude, weight, mask, y, x, shift[k]) ** 2 - noise**2, 0.0))
         turn = np.exp(-2j * np.pi * (shift[k, 0] * grid_y + shift[k, 1] * grid_x))
         inner[k] = (field * turn)[mask].mean()
         top = filled_part(amplitude, mask, 0.7)
@@ -374,9 +377,6 @@ def why_broken(crystal: CrystalFit) -> list[str | None]:
         else:
             reasons.append(None)
     return reasons
-
-
-_BROKEN_PHASE, _BROKEN_SHARE, _BROKEN_SPREAD = 0.5, 0.15, 0.25
 
 
 @dataclass(frozen=True, eq=False, slots=True)

@@ -81,7 +81,9 @@ def list_entries(file: str | None, most: int, overdue: float | None, json_file: 
     with _opened(file) as book:
         entries = book.entries(_filter(wanted), most=most)
         late = None if overdue is None else book.overdue(overdue)
-        lines = paragraph(f"{len(book)} {'entry' if len(book) == 1 else 'entries'} in {book.path}", width, emphasis="heading")
+        lines = paragraph(
+            f"{len(book)} {'entry' if len(book) == 1 else 'entries'} in {book.path}", width, emphasis="heading"
+        )
     lines += log_lines(entries, width) if late is None else overdue_lines(late, overdue or 0.0, width)
     if late is None and len(entries) == most:
         lines.append(Line(f"Only the newest {most} are shown (--most).", "quiet"))
