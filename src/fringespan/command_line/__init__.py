@@ -25,6 +25,7 @@ _COMMANDS = {
     "profile": "Measure the fringes along a line.",
     "expect": "List the reflections that a phase would show.",
     "rank": "Rank phases for typed spacings and angles.",
+    "view": "Open a picture in napari and measure with the mouse.",
     "beam": "Show wavelength, scattering angles and contrast transfer.",
 }
 
