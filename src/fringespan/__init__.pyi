@@ -3,6 +3,13 @@ from .beam import Lens as Lens
 from .beam import beam_summary as beam_summary
 from .beam import electron_wavelength_pm as electron_wavelength_pm
 from .cautions import Caution as Caution
+from .crystal.library import built_in_phases as built_in_phases
+from .crystal.library import find_phases as find_phases
+from .crystal.library import load_phase as load_phase
+from .crystal.library import load_phases as load_phases
+from .crystal.phase import Phase as Phase
+from .crystal.reflections import expected_reflections as expected_reflections
+from .crystal.zone import zone_pattern as zone_pattern
 from .exceptions import FringespanError as FringespanError
 from .lattice import PlaneLattice as PlaneLattice
 from .measurement import Measurement as Measurement
@@ -10,6 +17,11 @@ from .measurement import measure as measure
 from .micrograph import Micrograph as Micrograph
 from .profile import FringeProfile as FringeProfile
 from .profile import measure_profile as measure_profile
+from .ranking.hypotheses import Ranking as Ranking
+from .ranking.hypotheses import RankingSettings as RankingSettings
+from .ranking.rank import prepare_ranking as prepare_ranking
+from .ranking.rank import rank_phases as rank_phases
+from .ranking.rank import rank_regions as rank_regions
 from .reading import read as read
 from .record import Record as Record
 from .record import read_record as read_record

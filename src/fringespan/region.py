@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import cached_property, lru_cache
 from typing import Literal, cast, get_args
 
 import numpy as np
@@ -77,7 +77,9 @@ class Region:
         object.__setattr__(self, "name", str(self.name))
         object.__setattr__(self, "vertices_px", tuple((float(r), float(c)) for r, c in corners))
         if _crosses_itself(corners):
-            raise RegionError(f"region {self.name!r}: its outline crosses or touches itself; draw it so that it does not")
+            raise RegionError(
+                f"region {self.name!r}: its outline crosses or touches itself; draw it so that it does not"
+            )
         if _area(corners) <= 0:
             raise RegionError(f"region {self.name!r}: its outline encloses no area; draw it again")
 
@@ -129,7 +131,7 @@ class Footprint:
     mask: NDArray[np.bool_] | None
     spans: NDArray[np.int32]
 
-    @property
+    @cached_property
     def count(self) -> int:
         """Number of pixels that belong."""
         return int((self.spans[:, 2] - self.spans[:, 1]).sum())
@@ -190,6 +192,11 @@ def place_region(region: Region, picture_shape: tuple[int, int]) -> PlacedRegion
     RegionError
         If it lies outside the picture or is less than `SMALLEST_WIDTH_PX` wide in any direction.
     """
+    return _placed(region, (int(picture_shape[0]), int(picture_shape[1])))
+
+
+@lru_cache(maxsize=64)
+def _placed(region: Region, picture_shape: tuple[int, int]) -> PlacedRegion:
     corners = np.array(region.vertices_px)
     low, high = corners.min(axis=0), corners.max(axis=0)
     clipped = bool((low < -0.5).any() or (high > np.array(picture_shape) - 0.5).any())

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import Literal
 
+import numba
 import numpy as np
 from numpy.typing import NDArray
 
@@ -198,38 +200,52 @@ def spacings_of(
     sqrt(t C t) / |g|. A pixel size off by (e_row, e_column) changes d by n_row^2 e_row + n_col^2 e_col, relatively, and the
     direction by n_row n_col (e_row - e_col).
     """
-    flipped = (frequency[:, 1] < 0) | ((frequency[:, 1] == 0) & (frequency[:, 0] > 0))
-    g_px = np.where(flipped[:, None], -frequency, frequency)
-    transform = scale.to_per_nm
-    g = g_px @ transform
-    full = transform.T @ covariance @ transform
-    length = np.sqrt((g * g).sum(axis=1))
-    unit = g / length[:, None]
-    across = np.stack([-unit[:, 1], unit[:, 0]], axis=1)
-    # a crystal part along g in pixels, relative to |g|, stays the same relative part
-    relative = 1 / np.sqrt((g_px * g_px).sum(axis=1))
-    d = 1 / length
-    fit = d * d * np.sqrt(_form(unit, full))
-    turned = np.sqrt(_form(across, full)) / length
-    row, column = scale.uncertainty if scale.uncertainty is not None else (np.nan, np.nan)
-    weight_row, weight_column = unit[:, 0] ** 2, unit[:, 1] ** 2
-    if scale.common:
-        size_part, twist = d * row, np.zeros(len(d))
-    else:
-        size_part = d * np.hypot(weight_row * row, weight_column * column)
-        twist = np.abs(unit[:, 0] * unit[:, 1]) * np.hypot(row, column)
-    return Spacings(
-        g_px=g_px,
-        g=g,
-        flipped=flipped,
-        covariance=full,
-        d=d,
-        fit=fit,
-        crystal=d * crystal_along * relative,
-        scale=size_part,
-        direction=np.degrees(np.arctan2(-g[:, 0], g[:, 1])) % 180.0,
-        direction_uncertainty=np.degrees(np.sqrt(turned**2 + (crystal_across * relative) ** 2 + twist**2)),
-    )
+    n = len(frequency)
+    flipped = np.empty(n, np.bool_)
+    g_px, g, full, values = np.empty((n, 2)), np.empty((n, 2)), np.empty((n, 2, 2)), np.empty((6, n))
+    row, column = scale.uncertainty if scale.uncertainty is not None else (math.nan, math.nan)
+    _fill_spacings(
+        frequency, covariance, crystal_along, crystal_across, scale.to_per_nm, row, column, scale.common,
+        flipped, g_px, g, full, values,
+    )  # fmt: skip
+    return Spacings(g_px, g, flipped, full, *values)
+
+
+@numba.njit(cache=True, nogil=True)
+def _fill_spacings(  # type: ignore[no-untyped-def]
+    frequency, covariance, crystal_along, crystal_across, transform, row, column, common,
+    flipped, g_px, g, full, values,
+):  # fmt: skip
+    for k in range(frequency.shape[0]):
+        fy, fx = frequency[k]
+        flipped[k] = fx < 0 or (fx == 0 and fy > 0)
+        if flipped[k]:
+            fy, fx = -fy, -fx
+        g_px[k, 0], g_px[k, 1] = fy, fx
+        for a in range(2):
+            g[k, a] = fy * transform[0, a] + fx * transform[1, a]
+            for b in range(2):
+                full[k, a, b] = 0.0
+                for i in range(2):
+                    for j in range(2):
+                        full[k, a, b] += transform[i, a] * covariance[k, i, j] * transform[j, b]
+        length = np.hypot(g[k, 0], g[k, 1])
+        y, x = g[k, 0] / length, g[k, 1] / length
+        along = y * y * full[k, 0, 0] + 2 * y * x * full[k, 0, 1] + x * x * full[k, 1, 1]
+        across = x * x * full[k, 0, 0] - 2 * y * x * full[k, 0, 1] + y * y * full[k, 1, 1]
+        turned = np.sqrt(max(across, 0.0)) / length
+        # a crystal part along g in pixels, relative to |g|, stays the same relative part
+        relative = 1 / np.hypot(fy, fx)
+        d = 1 / length
+        twist = 0.0 if common else abs(y * x) * np.hypot(row, column)
+        values[0, k] = d
+        values[1, k] = d * d * np.sqrt(max(along, 0.0))
+        values[2, k] = d * crystal_along[k] * relative
+        values[3, k] = d * (row if common else np.hypot(y * y * row, x * x * column))
+        direction = np.degrees(np.arctan2(-g[k, 0], g[k, 1])) % 180.0
+        # the remainder of a tiny negative angle rounds up to 180
+        values[4, k] = direction if direction < 180.0 else 0.0
+        values[5, k] = np.degrees(np.sqrt(turned**2 + (crystal_across[k] * relative) ** 2 + twist**2))
 
 
 def diagonal_blocks(covariance: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -237,12 +253,6 @@ def diagonal_blocks(covariance: NDArray[np.float64]) -> NDArray[np.float64]:
     n = len(covariance) // 2
     k = np.arange(n)
     return covariance.reshape(n, 2, n, 2)[k, :, k, :]
-
-
-def _form(vector: NDArray[np.float64], matrix: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Return v C v for each row, never below 0."""
-    y, x = vector[:, 0], vector[:, 1]
-    return np.asarray(np.maximum(y * y * matrix[:, 0, 0] + 2 * y * x * matrix[:, 0, 1] + x * x * matrix[:, 1, 1], 0.0))
 
 
 def pair_angles(
@@ -268,24 +278,41 @@ def pair_angles(
     n = len(spacings.d)
     if n < 2:
         return ()
-    transform = scale.to_per_nm
-    g = spacings.g
-    length = np.sqrt((g * g).sum(axis=1))
-    unit = g / length[:, None]
+    row, column = scale.uncertainty if scale.uncertainty is not None and not scale.common else (0.0, 0.0)
+    angle, sigma = np.empty((n, n)), np.empty((n, n))
+    _fill_angles(
+        spacings.g, spacings.g_px, spacings.flipped, joint_covariance, crystal_across, scale.to_per_nm,
+        np.hypot(row, column), angle, sigma,
+    )  # fmt: skip
+    angles, sigmas = angle.tolist(), sigma.tolist()
+    return tuple(PairAngle((i, j), angles[i][j], sigmas[i][j]) for i in range(n) for j in range(i + 1, n))
+
+
+@numba.njit(cache=True, nogil=True)
+def _fill_angles(g, g_px, flipped, covariance, crystal_across, transform, anisotropy, angle, sigma):  # type: ignore[no-untyped-def]
+    n = g.shape[0]
     # gradient of each direction, in rad, with respect to the vector in cycles per pixel
-    sign = np.where(spacings.flipped, -1.0, 1.0)
-    gradient = (np.stack([-unit[:, 1], unit[:, 0]], axis=1) @ transform.T) * (sign / length)[:, None]
-    blocks = joint_covariance.reshape(n, 2, n, 2)
-    turning = np.einsum("ia,iajb,jb->ij", gradient, blocks, gradient)
-    own = np.diag(turning)
-    relative = 1 / np.sqrt((spacings.g_px**2).sum(axis=1))
-    crystal = (crystal_across * relative) ** 2
-    variance = own[:, None] + own[None] - 2 * turning + crystal[:, None] + crystal[None]
-    if scale.uncertainty is not None and not scale.common:
-        twist = unit[:, 0] * unit[:, 1]
-        variance = variance + ((twist[:, None] - twist[None]) * np.hypot(*scale.uncertainty)) ** 2
-    cosine = np.clip(unit @ unit.T, -1.0, 1.0)
-    cross = np.abs(unit[:, :1] * unit[:, 1:].T - unit[:, 1:] * unit[:, :1].T)
-    angle = np.degrees(np.arctan2(cross, cosine)).tolist()
-    sigma = np.degrees(np.sqrt(np.maximum(variance, 0.0))).tolist()
-    return tuple(PairAngle((i, j), angle[i][j], sigma[i][j]) for i in range(n) for j in range(i + 1, n))
+    gradient = np.empty((n, 2))
+    unit = np.empty((n, 2))
+    for k in range(n):
+        length = np.hypot(g[k, 0], g[k, 1])
+        unit[k, 0], unit[k, 1] = g[k, 0] / length, g[k, 1] / length
+        sign = -1.0 if flipped[k] else 1.0
+        for a in range(2):
+            gradient[k, a] = (-unit[k, 1] * transform[a, 0] + unit[k, 0] * transform[a, 1]) * sign / length
+    turning = np.zeros((n, n))
+    for i in range(n):
+        for j in range(n):
+            for a in range(2):
+                for b in range(2):
+                    turning[i, j] += gradient[i, a] * covariance[2 * i + a, 2 * j + b] * gradient[j, b]
+    for i in range(n):
+        for j in range(i + 1, n):
+            variance = turning[i, i] + turning[j, j] - 2 * turning[i, j]
+            for k in (i, j):
+                variance += (crystal_across[k] / np.hypot(g_px[k, 0], g_px[k, 1])) ** 2
+            variance += ((unit[i, 0] * unit[i, 1] - unit[j, 0] * unit[j, 1]) * anisotropy) ** 2
+            cosine = unit[i, 0] * unit[j, 0] + unit[i, 1] * unit[j, 1]
+            cross = abs(unit[i, 0] * unit[j, 1] - unit[i, 1] * unit[j, 0])
+            angle[i, j] = np.degrees(np.arctan2(cross, cosine))
+            sigma[i, j] = np.degrees(np.sqrt(max(variance, 0.0)))

@@ -261,28 +261,38 @@ def _cell_sums(values, spans, cells_y, cells_x):  # type: ignore[no-untyped-def]
     if not np.isfinite(offset):
         offset = 0.0
     base = np.float32(offset)
-    for k in range(spans.shape[0]):
-        y = spans[k, 0]
-        cy = y * cells_y // ny
-        for cx in range(spans[k, 1] * cells_x // nx, (spans[k, 2] - 1) * cells_x // nx + 1):
-            # the cell of pixel x is x * cells_x // nx, so its first pixel is the rounded-up quotient
-            x0 = max((cx * nx + cells_x - 1) // cells_x, spans[k, 1])
-            x1 = min(((cx + 1) * nx + cells_x - 1) // cells_x, spans[k, 2])
-            s = np.float32(0)
-            q = np.float32(0)
-            for x in range(x0, x1):
-                v = np.float32(values[y, x]) - base
-                s += v
-                q += v * v
-            sums[cy, cx] += s
-            counts[cy, cx] += x1 - x0
-            squares += q
+    # column by column over the rows of a cell, which runs in vectors
+    columns = np.zeros((3, nx), np.float32)
+    row_of_cells = 0
+    for k in range(spans.shape[0] + 1):
+        cy = spans[k, 0] * cells_y // ny if k < spans.shape[0] else cells_y
+        if cy != row_of_cells:
+            for cx in range(cells_x):
+                # the cell of pixel x is x * cells_x // nx, so its first pixel is the rounded-up quotient
+                for x in range((cx * nx + cells_x - 1) // cells_x, ((cx + 1) * nx + cells_x - 1) // cells_x):
+                    sums[row_of_cells, cx] += columns[0, x]
+                    squares += columns[1, x]
+                    counts[row_of_cells, cx] += columns[2, x]
+            columns[:, :] = np.float32(0)
+            row_of_cells = cy
+        if k < spans.shape[0]:
+            x0, x1 = spans[k, 1], spans[k, 2]
+            source, total = values[spans[k, 0], x0:x1], columns[0, x0:x1]
+            squared, number = columns[1, x0:x1], columns[2, x0:x1]
+            for x in range(source.size):
+                v = np.float32(source[x]) - base
+                total[x] += v
+                squared[x] += v * v
+                number[x] += np.float32(1)
     return sums, counts, squares, np.float64(base)
 
 
 @numba.njit(cache=True, nogil=True)
 def _fit_trend(sums, counts, squares):  # type: ignore[no-untyped-def]
-    """Fit the ten monomials up to third order to the cell means, weighted by their pixel counts."""
+    """Fit the ten monomials up to third order to the cell means, weighted by their pixel counts.
+
+    Where a sum is not finite the trend is 0 and so is its spread, which no pixel is then within.
+    """
     cells_y, cells_x = sums.shape
     normal = np.zeros((10, 10))
     right = np.zeros(10)
@@ -308,6 +318,8 @@ def _fit_trend(sums, counts, squares):  # type: ignore[no-untyped-def]
                 right[i] += row[i] * sums[cy, cx]
                 for j in range(i + 1):
                     normal[i, j] += n * row[i] * row[j]
+    if not (np.isfinite(right).all() and np.isfinite(squares)):
+        return np.zeros(10), 0.0
     total = normal[0, 0]
     for i in range(10):
         for j in range(i):
@@ -349,8 +361,11 @@ def prepare_pixels(values: NDArray[np.generic], footprint: Footprint) -> RegionP
     RegionPixels
         With `sigma` 0 if all pixels are equal.
     """
-    if values.dtype == np.float16 or not values.dtype.isnative:
-        values = values.astype(np.float32 if values.dtype == np.float16 else values.dtype.newbyteorder("="))
+    kind = values.dtype
+    if kind.kind == "f" and kind.itemsize not in (4, 8):
+        values = values.astype(np.float32 if kind.itemsize == 2 else np.float64)
+    elif not kind.isnative:
+        values = values.astype(kind.newbyteorder("="))
     trend, sigma = _trend(values, _trend_spans(footprint))
     return RegionPixels(values, footprint, trend, sigma, 0, 0)
 
@@ -392,7 +407,9 @@ def without_defects(pixels: RegionPixels) -> RegionPixels:
             break
         good &= ~far
     if not good.any():
-        return RegionPixels(values, footprint, np.zeros(10), 0.0, int(inside.sum()), int(saturated.sum()))
+        return RegionPixels(
+            np.zeros_like(values), footprint, np.zeros(10), 0.0, int(inside.sum()), int(saturated.sum())
+        )
     bad = inside & ~good
     filled = np.where(good, values, trend_surface(trend, footprint.shape)).astype(np.float32)
     return RegionPixels(filled, footprint, trend, sigma, int(bad.sum() - saturated.sum()), int(saturated.sum()))

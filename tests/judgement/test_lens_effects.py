@@ -23,7 +23,7 @@ def test_delocalisation_is_the_published_difference():
 
 def test_the_transfer_is_stated_for_each_peak_and_the_shift_of_the_strong_ones():
     effects = LensEffects((-0.5, 0.25, 0.9), (0.2, -0.3, 7.0))
-    (stated,) = lens_cautions(effects, [100, 50, 3], SCHERZER_200KV)
+    (stated,) = lens_cautions(effects, [100, 50, 3], 0.2, SCHERZER_200KV)
     assert stated.code == "lens-transfer"
     assert "1: -0.50, 2: +0.25, 3: +0.90" in stated.text
     assert "57.8 nm underfocus" in stated.text
@@ -32,9 +32,10 @@ def test_the_transfer_is_stated_for_each_peak_and_the_shift_of_the_strong_ones()
 
 def test_a_strong_peak_far_from_its_crystal_warns():
     effects = LensEffects((-0.5, 0.25), (0.2, -3.1))
-    codes = {c.code: c for c in lens_cautions(effects, [100, 50], Lens(voltage_kv=300, cs_mm=0, defocus_nm=-20))}
+    codes = {c.code: c for c in lens_cautions(effects, [100, 50], 0.2, Lens(voltage_kv=300, cs_mm=0, defocus_nm=-20))}
     assert set(codes) == {"lens-transfer", "delocalised-fringes"}
     assert "up to 3.1 nm" in codes["delocalised-fringes"].text
+    assert "near 3.39 nm underfocus" in codes["delocalised-fringes"].remedy
     assert "20 nm overfocus" in codes["lens-transfer"].text
 
 

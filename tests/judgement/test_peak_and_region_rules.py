@@ -63,12 +63,13 @@ def test_another_crystal_is_named_by_its_spacings():
     assert "(20, 10 px)" in another_crystal(frequency[:2], None).text
 
 
-def test_where_the_crystal_rules_the_calmest_defocus_is_named_if_the_lens_is_known():
+def test_where_the_crystal_rules_a_series_is_advised_and_if_the_lens_is_known_a_defocus():
     # Cs lambda^2 / d^2 with 1 mm, 2.5079 pm, 0.2355 nm: 113.4 nm
     assert "113 nm underfocus" in crystal_part_rules(200, 1.0, 0.2355).remedy
     assert "focal series" in crystal_part_rules(None, None, 0.2355).remedy
-    # with Cs = 0 that defocus is 0, where contrast vanishes: no advice
-    assert "underfocus" not in crystal_part_rules(300, 0.0, 0.2355).remedy
+    assert "underfocus" not in crystal_part_rules(None, None, 0.2355).remedy
+    # with Cs = 0 that defocus is 0, where contrast vanishes: d^2 / (6 lambda) brings half of it back
+    assert "3.39 nm underfocus" in crystal_part_rules(300, 0.0, 0.2).remedy
 
 
 @pytest.mark.parametrize(

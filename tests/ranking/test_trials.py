@@ -12,6 +12,7 @@ from types import ModuleType
 
 import numpy as np
 import pytest
+from scipy.special import bdtrc
 
 
 @pytest.fixture(scope="module")
@@ -62,7 +63,9 @@ def test_many_trials_reach_their_goals(trials: ModuleType, settings: dict[str, f
     tally = trials.run(trials.Case("", **settings), number, seed=101)
     for name, share in least.items():
         assert getattr(tally, name) >= share * number, name
-    assert tally.identified_right >= 0.96 * tally.identified
+    # at most one identification in a hundred is wrong: the number of errors is no rarer than that explains
+    wrong = tally.identified - tally.identified_right
+    assert wrong == 0 or bdtrc(wrong - 1, tally.identified, 0.01) > 0.01
     # what it says is what comes true
     if "listed" not in settings:
         assert tally.said / number == pytest.approx(tally.right / number, abs=0.08)

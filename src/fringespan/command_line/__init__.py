@@ -23,6 +23,8 @@ _COMMANDS = {
     "demo": "Measure a sample picture into a new folder, to see how it works.",
     "measure": "Measure fringe spacings and angles in pictures.",
     "profile": "Measure the fringes along a line.",
+    "check": "Check the magnification by a reference material.",
+    "log": "List, plot, export and import the log of magnification checks.",
     "expect": "List the reflections that a phase would show.",
     "rank": "Rank phases for typed spacings and angles.",
     "view": "Open a picture in napari and measure with the mouse.",

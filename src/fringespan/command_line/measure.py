@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -18,7 +19,7 @@ from fringespan.command_line.output_options import (
     takes_output_options,
 )
 from fringespan.command_line.picture_options import PictureOptions, takes_picture_options
-from fringespan.exceptions import FringespanError
+from fringespan.exceptions import FringespanError, SettingsError
 
 if TYPE_CHECKING:
     from fringespan.crystal.phase import Phase
@@ -41,23 +42,49 @@ Examples:
   fringespan measure particle.tif --pixel-size-uncertainty 1 --phases gold,tio2_a,specimen.cif
   fringespan measure particle.tif --regions earlier_record.json --json record.json --figure figure.pdf
   fringespan measure series/*.tif --json records.json --csv table.csv
+  fringespan measure f1.tif f2.tif f3.tif --focal-series --defocus-each 20,45,70 --voltage 200 --cs 0.5
 
 With several pictures, one record and one figure a picture are written, with the picture's name put into FILE
 (records.particle.json), but a single table. "-" as FILE writes to standard output, in place of the text: with
 several pictures a JSON list of their records.
+
+Thickness and lens shift the fringes of a small crystal, at each defocus in another way. With --focal-series pictures of
+the same region at different defocus (or the frames of one stack) are combined; one JSON document then holds what they show
+together and the record of each.
 """
 
 
 @click.command(help=_HELP)
 @click.argument("images", nargs=-1, required=True, metavar="IMAGE...")
+@click.option("--focal-series", is_flag=True, help="Combine the pictures: the same region at different defocus.")
+@click.option(
+    "--defocus-each",
+    metavar="NM,NM,...",
+    callback=lambda _context, _option, value: _numbers(value),
+    help="With --focal-series: the defocus of each picture in their order, positive for underfocus.",
+)
 @takes_picture_options
 @takes_output_options(
     json="Write the record: all that is needed to repeat and defend the measurement.",
     csv="Write the table of peaks with every digit.",
     figure="Draw picture, regions and spectra (.png, .svg or .pdf).",
 )
-def measure(images: tuple[str, ...], picture: PictureOptions, output: OutputOptions) -> int:
+def measure(
+    images: tuple[str, ...],
+    picture: PictureOptions,
+    output: OutputOptions,
+    focal_series: bool,
+    defocus_each: tuple[float, ...],
+) -> int:
     """Measure each picture, print it, and write what was asked for."""
+    if focal_series:
+        return _measure_series(images, picture, output, defocus_each)
+    if defocus_each:
+        raise click.UsageError("--defocus-each goes with --focal-series", click.get_current_context())
+    return _measure_each(images, picture, output)
+
+
+def _measure_each(images: tuple[str, ...], picture: PictureOptions, output: OutputOptions) -> int:
     from fringespan.command_line.printing import print_lines, text_width
     from fringespan.export.measurement_text import measurement_lines
     from fringespan.export.plain_text import Line
@@ -97,6 +124,73 @@ def _measured(image: str, picture: PictureOptions, phases: Sequence[Phase]) -> t
     micrograph = picture.open(image)
     measurements = [measure_region(micrograph, region) for region in picture.regions_of(micrograph)]
     return measurements, record_of(measurements, identifications_of(measurements, phases))
+
+
+def _measure_series(
+    images: tuple[str, ...], picture: PictureOptions, output: OutputOptions, defocus_each: tuple[float, ...]
+) -> int:
+    """Measure the pictures of a focal series and print what they show together."""
+    from fringespan.command_line.printing import print_lines, text_width
+    from fringespan.export.focal_series_text import focal_series_lines
+    from fringespan.export.table import csv_text, peak_table
+    from fringespan.focal_series import combine_focal_series
+    from fringespan.record import json_text
+    from fringespan.record.series_document import series_document
+
+    shots = _shots(images, picture, defocus_each)
+    figure_files = _one_file_a_picture(output.figure, [shot.label for shot in shots])
+    refuse_to_overwrite(images, [*figure_files, *(f for f in (output.json, output.csv) if f is not None)])
+    phases = picture.phases_to_compare()
+    measured = [_measured(shot.image, shot.picture, phases) for shot in shots]
+    by_region = list(zip(*(measurements for measurements, _ in measured), strict=True))
+    series = [(one[0].region.name, combine_focal_series(one)) for one in by_region]
+    records = [record for _, record in measured]
+    if not output.to_standard_output:
+        print_lines(focal_series_lines(series, text_width()))
+    deliver(lambda: json_text(series_document(series, records)), output.json)
+    deliver(lambda: csv_text(peak_table(records)), output.csv)
+    for (measurements, _), file in zip(measured, figure_files, strict=False):
+        _draw(measurements, file)
+    return 0
+
+
+@dataclass(frozen=True, slots=True)
+class _Shot:
+    """One picture of a focal series, and what to call it in the names of files."""
+
+    image: str
+    picture: PictureOptions
+    label: str
+
+
+def _shots(images: tuple[str, ...], picture: PictureOptions, defocus_each: tuple[float, ...]) -> list[_Shot]:
+    """Return the pictures of a series: the files, or the frames of a single one."""
+    shots = [_Shot(image, picture, image) for image in images]
+    if len(images) == 1:
+        frames = picture.open(images[0]).frame_count
+        name = os.path.basename(os.path.normpath(images[0])).partition(".")[0]
+        shots = [_Shot(images[0], replace(picture, frame=n), f"{name}-{n}") for n in range(frames)]
+        if frames < 2:
+            raise SettingsError(
+                f"{images[0]}: a focal series needs at least two pictures, and this is one; name them all, or a stack"
+            )
+    if not defocus_each:
+        return shots
+    if len(defocus_each) != len(shots):
+        raise SettingsError(
+            f"--defocus-each must have one number for each of the {len(shots)} pictures, got {len(defocus_each)}"
+        )
+    return [
+        replace(shot, picture=replace(shot.picture, defocus_nm=defocus))
+        for shot, defocus in zip(shots, defocus_each, strict=True)
+    ]
+
+
+def _numbers(text: str | None) -> tuple[float, ...]:
+    try:
+        return tuple(float(part) for part in text.split(",")) if text is not None else ()
+    except ValueError:
+        raise click.BadParameter(f"{text!r} is no list of numbers with commas between them") from None
 
 
 def _draw(measurements: Sequence[Measurement], file: Path) -> None:

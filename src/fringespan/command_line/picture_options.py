@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from fringespan.command_line.from_log import LogChoice, from_log_option
 from fringespan.exceptions import CalibrationError, RegionError
 
 if TYPE_CHECKING:
@@ -34,6 +35,8 @@ class PictureOptions:
         Empty: the whole picture.
     phases : str
         "none", "all", or names and CIF files with commas between.
+    from_log : LogChoice or None
+        Where in the log of magnification checks the pixel size comes from.
     """
 
     pixel_size_nm: tuple[float, float] | None
@@ -44,12 +47,13 @@ class PictureOptions:
     frame: int
     regions: tuple[Region, ...]
     phases: str
+    from_log: LogChoice | None = None
 
     def open(self, path: str) -> Micrograph:
         """Open a picture with these options."""
         from fringespan.reading import read
 
-        return read(
+        micrograph = read(
             path,
             frame=self.frame,
             pixel_size_nm=self.pixel_size_nm,
@@ -58,6 +62,7 @@ class PictureOptions:
             cs_mm=self.cs_mm,
             defocus_nm=self.defocus_nm,
         )
+        return micrograph if self.from_log is None else self.from_log.applied(micrograph)
 
     def regions_of(self, micrograph: Micrograph) -> tuple[Region, ...]:
         """Return the regions to measure in a picture."""
@@ -89,6 +94,7 @@ def takes_picture_options(command: Callable[..., Any]) -> Callable[..., Any]:
         region: list[DrawnRegion],
         regions: str | None,
         phases: str,
+        from_log: LogChoice | None,
         **others: Any,
     ) -> Any:
         options = PictureOptions(
@@ -100,6 +106,7 @@ def takes_picture_options(command: Callable[..., Any]) -> Callable[..., Any]:
             frame=frame,
             regions=_regions(region, regions),
             phases=phases,
+            from_log=from_log,
         )
         _refuse_impossible_values(options)
         return command(*arguments, picture=options, **others)
@@ -111,6 +118,11 @@ def takes_picture_options(command: Callable[..., Any]) -> Callable[..., Any]:
 
 def _refuse_impossible_values(options: PictureOptions) -> None:
     """Refuse what no picture can have as wrong usage, before any file is opened."""
+    if options.from_log is not None and options.pixel_size_relative_uncertainty is not None:
+        raise click.UsageError(
+            "--from-log brings the uncertainty of the pixel size with it; leave --pixel-size-uncertainty out",
+            click.get_current_context(),
+        )
     import numpy as np
 
     from fringespan.micrograph import Micrograph
@@ -198,6 +210,7 @@ _OPTIONS: list[Callable[[Callable[..., Any]], Callable[..., Any]]] = [
         help="Relative standard uncertainty of the pixel size. One number: rows and columns share the same error, so "
         "that angles are not touched; two: independent errors.",
     ),
+    from_log_option(),
     click.option("--voltage", type=float, metavar="KV", help="Beam voltage; gives scattering angles."),
     click.option("--cs", type=float, metavar="MM", help="Spherical aberration of the objective lens."),
     click.option("--defocus", type=float, metavar="NM", help="Defocus, positive for underfocus."),

@@ -10,8 +10,9 @@ import numpy as np
 
 from fringespan.beam import Lens, parabolic_excitation_error_per_nm, phase_contrast_transfer, signed_delocalisation_nm
 from fringespan.cautions import Caution
+from fringespan.judgement.focus_advice import focus_advice
 
-__all__ = ["LensEffects", "defocus_words", "lens_cautions", "lens_effects", "off_bragg_caution"]
+__all__ = ["LensEffects", "defocus_remedy", "defocus_words", "lens_cautions", "lens_effects", "off_bragg_caution"]
 
 _FAR_NM = 0.5
 """Delocalisation from which the region's place, and the error of a particle's spacing, are ruled by it."""
@@ -48,7 +49,9 @@ def lens_effects(g_per_nm: Sequence[float], lens: Lens) -> LensEffects:
     )
 
 
-def lens_cautions(effects: LensEffects, signal_to_noise: Sequence[float], lens: Lens) -> tuple[Caution, ...]:
+def lens_cautions(
+    effects: LensEffects, signal_to_noise: Sequence[float], strongest_nm: float, lens: Lens
+) -> tuple[Caution, ...]:
     """State the transfer at each peak, and warn where the fringes of strong ones lie off their crystal.
 
     Parameters
@@ -57,6 +60,8 @@ def lens_cautions(effects: LensEffects, signal_to_noise: Sequence[float], lens: 
         Of at least one peak.
     signal_to_noise : sequence of float
         Of the peaks.
+    strongest_nm : float
+        Spacing of the strongest peak.
     lens : Lens
 
     Returns
@@ -86,8 +91,7 @@ def lens_cautions(effects: LensEffects, signal_to_noise: Sequence[float], lens: 
                 "warning",
                 f"The lens shifts fringes sideways by up to {high:.1f} nm: they do not stand where their crystal is, and "
                 "its shape bends them.",
-                "Draw the region where the fringes are, and take the picture nearer to the defocus Cs lambda^2 / d^2, where "
-                "they are shifted least.",
+                f"Draw the region where the fringes are; {defocus_remedy(strongest_nm, lens.voltage_kv, lens.cs_mm)}",
             ),
         )
     return found
@@ -96,6 +100,15 @@ def lens_cautions(effects: LensEffects, signal_to_noise: Sequence[float], lens: 
 def defocus_words(defocus_nm: float) -> str:
     """Return a defocus in words, such as "60 nm underfocus"."""
     return f"{abs(defocus_nm):.3g} nm {'overfocus' if defocus_nm < 0 else 'underfocus'}"
+
+
+def defocus_remedy(d_nm: float, voltage_kv: float, cs_mm: float) -> str:
+    """Say at which defocus the lens disturbs a spacing least and still shows it; ends with a full stop."""
+    advice = focus_advice(d_nm, voltage_kv, cs_mm)
+    return (
+        f"near {defocus_words(advice.defocus_nm)} the lens shows fringes of {d_nm:.4f} nm and shifts them by "
+        f"{advice.delocalisation_nm:.2f} nm only."
+    )
 
 
 def off_bragg_caution(finest_nm: float, voltage_kv: float) -> tuple[Caution, ...]:

@@ -1,4 +1,7 @@
-"""What to say about a region as a whole: each rule with its own text and remedy."""
+"""What to say about a region as a whole: each rule with its own text and remedy.
+
+The articles named in the texts are cited from memory.
+"""
 
 from __future__ import annotations
 
@@ -8,10 +11,10 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from fringespan.beam import Lens, focus_without_delocalisation_nm
+from fringespan.beam import Lens
 from fringespan.cautions import Caution
 from fringespan.crystal_fringes import CrystalFringes
-from fringespan.judgement.lens_effects import LensEffects, defocus_words, lens_cautions, off_bragg_caution
+from fringespan.judgement.lens_effects import LensEffects, defocus_remedy, lens_cautions, off_bragg_caution
 from fringespan.judgement.missing_fringes import needed_fringes, no_fringe_caution
 from fringespan.judgement.off_lattice import OFF_LATTICE
 from fringespan.judgement.peaks import fringe_counts
@@ -83,7 +86,8 @@ SMALL_CRYSTAL = Caution(
     "warning",
     "Small crystals deceive: off a zone axis their fringe spacings differ from the lattice by up to several per cent, and "
     "bend or split in a perfect crystal (Malm & O'Keefe, Ultramicroscopy 68 (1997) 13); one picture does not show a tilt.",
-    "Measure several particles, and take d from the lattice; with voltage, Cs and defocus given, the lens is counted in.",
+    "Measure several particles, and take d from the lattice; with voltage, Cs and defocus given the lens is counted in, and "
+    "pictures at two tilts show the tilt (Qin & Fraundorf, Ultramicroscopy 94 (2003) 245).",
 )
 
 PIXEL_SIZE_NOT_STATED = Caution(
@@ -186,13 +190,13 @@ def crystal_smaller_than_region(share: float) -> Caution:
 
 def crystal_part_rules(voltage_kv: float | None, cs_mm: float | None, d_nm: float) -> Caution:
     """Say what helps where the shape of the crystal rules the uncertainty of a spacing."""
-    remedy = "Take a focal series and combine it, or measure a larger, flatter crystal."
-    if voltage_kv is not None and cs_mm:
-        defocus = float(focus_without_delocalisation_nm(1 / d_nm, voltage_kv, cs_mm))
-        remedy = (
-            f"Near {defocus_words(defocus)} the lens disturbs {d_nm:.4f} nm least, if its contrast lasts there; a focal "
-            "series gains more."
-        )
+    remedy = (
+        "Combine a focal series, of which five pictures lower this part to 0.6, or measure a larger, flatter crystal"
+    )
+    if voltage_kv is None or cs_mm is None:
+        remedy += "."
+    else:
+        remedy += f"; {defocus_remedy(d_nm, voltage_kv, cs_mm)}"
     return Caution(
         "crystal-part-rules",
         "note",
@@ -299,7 +303,7 @@ def region_cautions(
         signs.rows_differ,
     )
     if lens is not None and effects is not None:
-        said += lens_cautions(effects, [p.signal_to_noise for p in peaks], lens)
+        said += lens_cautions(effects, [p.signal_to_noise for p in peaks], _spacing_nm(peaks[0]), lens)
     said += _part_that_rules(peaks, micrograph)
     if signs.rows_differ or signs.columns_differ:
         said.append(SCAN_LINES)
@@ -318,6 +322,12 @@ def _are_unexplained(peaks: Sequence[Peak], members: NDArray[np.bool_]) -> bool:
     """Say whether at least three peaks of a second lattice are neither superlattice nor folded."""
     own = [p for p, member in zip(peaks, members.tolist(), strict=True) if member]
     return sum(OFF_LATTICE in p.cautions for p in own) >= _LEAST_OF_LATTICE
+
+
+def _spacing_nm(peak: Peak) -> float:
+    """Return the spacing of a peak in nm, also where it is withheld."""
+    assert peak.g_per_nm is not None
+    return 1 / float(np.hypot(*peak.g_per_nm))
 
 
 def _part_that_rules(peaks: Sequence[Peak], micrograph: Micrograph) -> tuple[Caution, ...]:

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from fringespan.region import Footprint
 from fringespan.spectrum import RegionPixels, trend_row
 
-__all__ = ["Demodulation", "block_size", "demodulate"]
+__all__ = ["Demodulation", "block_size", "demodulate", "turned"]
 
 _LARGE = 400
 """Regions wider than this are summed in blocks of 8 pixels, smaller ones in blocks of 4."""
@@ -57,37 +57,35 @@ class Demodulation:
         return Demodulation(frequency, blocks, self.block, moments)
 
 
-@numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
+_FAST = {"reassoc", "contract", "nsz", "arcp"}
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_FAST)
 def _demodulate(values, spans, trend, frequency, size, blocks, moments):  # type: ignore[no-untyped-def]
     ny, nx = values.shape
     count = frequency.shape[0]
     middle_y = (ny - 1) / 2
     middle_x = (nx - 1) / 2
     half = (size - 1) / 2
+    # a little more than the blocks need: rows a power of two apart would displace each other from the cache
+    width = size * blocks.shape[2] + 16
     scaled = ((np.arange(nx) + 0.5) * 2 / nx - 1).astype(np.float32)
-    position = (np.arange(nx) - middle_x).astype(np.float32)
-    wave_re = np.empty((count, nx), np.float32)
-    wave_im = np.empty((count, nx), np.float32)
-    weights = np.empty((count, 4, 8), np.float32)
+    position = (np.arange(width) - middle_x).astype(np.float32)
+    wave = np.zeros((count, 2, width), np.float32)
+    # of rows at equal distance from the middle of a block the cosine is the same and the sine opposite
+    weights = np.empty((count, 4, size // 2), np.float32)
     for k in range(count):
-        for x in range(nx):
-            angle = 2 * np.pi * frequency[k, 1] * (x - middle_x)
-            wave_re[k, x] = np.cos(angle)
-            wave_im[k, x] = -np.sin(angle)
-        for r in range(size):
-            angle = 2 * np.pi * frequency[k, 0] * (r - half)
+        _write_wave(frequency[k, 1], middle_x, nx, wave[k])
+        for r in range(size // 2):
+            angle = 2 * np.pi * frequency[k, 0] * (half - r)
             weights[k, 0, r] = np.cos(angle)
             weights[k, 1, r] = -np.sin(angle)
-            weights[k, 2, r] = np.cos(angle) * (r - half)
-            weights[k, 3, r] = -np.sin(angle) * (r - half)
-    z = np.zeros((size, nx), np.float32)
-    padded = size * blocks.shape[2]
-    re = np.zeros(padded + 8, np.float32)
-    im = np.zeros(padded + 8, np.float32)
-    block_re = np.zeros(padded + 8, np.float32)
-    block_im = np.zeros(padded + 8, np.float32)
-    down_re = np.empty(nx, np.float32)
-    down_im = np.empty(nx, np.float32)
+            weights[k, 2, r] = np.cos(angle) * (half - r)
+            weights[k, 3, r] = -np.sin(angle) * (half - r)
+    z = np.zeros((size, width), np.float32)
+    folded = np.zeros((size, width), np.float32)
+    product = np.zeros((2, width), np.float32)
+    scratch = np.zeros((2, width // 2), np.float32)
     span = 0
     for block in range(blocks.shape[1]):
         y0 = block * size
@@ -99,87 +97,113 @@ def _demodulate(values, spans, trend, frequency, size, blocks, moments):  # type
             for x in range(source.size):
                 target[x] = np.float32(source[x]) - (a + t[x] * (b + t[x] * (c + t[x] * d)))
             span += 1
+        for r in range(size // 2):
+            _fold(z[r], z[size - 1 - r], folded[r], folded[size // 2 + r])
         centre = y0 + half - middle_y
         for k in range(count):
             if size == 8:
-                _eight_rows(z, weights[k, 0], weights[k, 1], wave_re[k], wave_im[k], re, im)
-                _eight_rows(z, weights[k, 2], weights[k, 3], wave_re[k], wave_im[k], down_re, down_im)
+                across, down = _eight_rows(folded, weights[k], wave[k], position, product)
             else:
-                _four_rows(z, weights[k, 0], weights[k, 1], wave_re[k], wave_im[k], re, im)
-                _four_rows(z, weights[k, 2], weights[k, 3], wave_re[k], wave_im[k], down_re, down_im)
-            across_re = np.float32(0)
-            across_im = np.float32(0)
-            sum_re = np.float32(0)
-            sum_im = np.float32(0)
-            for x in range(nx):
-                across_re += re[x] * position[x]
-                across_im += im[x] * position[x]
-                sum_re += down_re[x]
-                sum_im += down_im[x]
-            _sums_of_neighbours(re, size, block_re)
-            _sums_of_neighbours(im, size, block_im)
+                across, down = _four_rows(folded, weights[k], wave[k], position, product)
             # what is common to the rows of the block: the phase of their middle
             angle = 2 * np.pi * frequency[k, 0] * centre
             turn = np.cos(angle) - 1j * np.sin(angle)
+            re = _block_sums(product[0], size, scratch)
+            im = _block_sums(product[1], size, scratch)
             total = 0j
             for j in range(blocks.shape[2]):
-                value = (block_re[size * j] + 1j * block_im[size * j]) * turn
+                value = (re[j] + 1j * im[j]) * turn
                 blocks[k, block, j] = value
                 total += value
             moments[k, 0] += total
-            moments[k, 1] += centre * total + (sum_re + 1j * sum_im) * turn
-            moments[k, 2] += (across_re + 1j * across_im) * turn
-            re[nx:] = np.float32(0)
-            im[nx:] = np.float32(0)
-
-
-# In the two functions below all weights are scalars and all rows lie in one array: with more pointers the compiler would
-# not use vectors.
-
-
-@numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
-def _eight_rows(z, c, s, wave_re, wave_im, re, im):  # type: ignore[no-untyped-def]
-    c0, c1, c2, c3, c4, c5, c6, c7 = c[0], c[1], c[2], c[3], c[4], c[5], c[6], c[7]
-    s0, s1, s2, s3, s4, s5, s6, s7 = s[0], s[1], s[2], s[3], s[4], s[5], s[6], s[7]
-    for x in range(z.shape[1]):
-        a = z[0, x] * c0 + z[1, x] * c1 + z[2, x] * c2 + z[3, x] * c3
-        a += z[4, x] * c4 + z[5, x] * c5 + z[6, x] * c6 + z[7, x] * c7
-        b = z[0, x] * s0 + z[1, x] * s1 + z[2, x] * s2 + z[3, x] * s3
-        b += z[4, x] * s4 + z[5, x] * s5 + z[6, x] * s6 + z[7, x] * s7
-        re[x] = a * wave_re[x] - b * wave_im[x]
-        im[x] = a * wave_im[x] + b * wave_re[x]
-
-
-@numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
-def _four_rows(z, c, s, wave_re, wave_im, re, im):  # type: ignore[no-untyped-def]
-    c0, c1, c2, c3 = c[0], c[1], c[2], c[3]
-    s0, s1, s2, s3 = s[0], s[1], s[2], s[3]
-    for x in range(z.shape[1]):
-        a = z[0, x] * c0 + z[1, x] * c1 + z[2, x] * c2 + z[3, x] * c3
-        b = z[0, x] * s0 + z[1, x] * s1 + z[2, x] * s2 + z[3, x] * s3
-        re[x] = a * wave_re[x] - b * wave_im[x]
-        im[x] = a * wave_im[x] + b * wave_re[x]
-
-
-@numba.njit(cache=True, nogil=True, fastmath={"reassoc", "contract", "nsz", "arcp"})
-def _shifted_sum(line, shift, out):  # type: ignore[no-untyped-def]
-    shifted = line[shift:]
-    for x in range(out.size - 8):
-        out[x] = line[x] + shifted[x]
+            moments[k, 1] += centre * total + down * turn
+            moments[k, 2] += across * turn
 
 
 @numba.njit(cache=True, nogil=True)
-def _sums_of_neighbours(line, size, out):  # type: ignore[no-untyped-def]
-    """Write into `out`, at every multiple of `size` (4 or 8), the sum of `size` values of `line`, which becomes scratch."""
-    # whole passes over distinct arrays run in vectors, short sums do not
-    if size == 8:
-        _shifted_sum(line, 4, out)
-        _shifted_sum(out, 2, line)
-        _shifted_sum(line, 1, out)
-    else:
-        _shifted_sum(line, 2, out)
-        _shifted_sum(out, 1, line)
-        out[:] = line
+def _write_wave(frequency, middle, count, wave):  # type: ignore[no-untyped-def]
+    """Fill wave with real and imaginary part of exp(-2 pi i f (x - middle)); one exponential serves 32 points."""
+    step = np.exp(-2j * np.pi * frequency)
+    for first in range(0, count, 32):
+        turn = np.exp(-2j * np.pi * frequency * (first - middle))
+        for x in range(first, min(first + 32, count)):
+            wave[0, x] = turn.real
+            wave[1, x] = turn.imag
+            turn *= step
+
+
+@numba.njit(cache=True, nogil=True)
+def _fold(upper, lower, even, odd):  # type: ignore[no-untyped-def]
+    for x in range(upper.size):
+        even[x] = lower[x] + upper[x]
+        odd[x] = lower[x] - upper[x]
+
+
+# In the two functions below all weights are scalars and all rows lie in one array: with more pointers the compiler would
+# not use vectors. They write the product of the rows' sum with the wave, and return the sums of that product times the
+# position along the row, and of the rows weighted by their distance from the middle of the block.
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_FAST)
+def _eight_rows(folded, w, wave, position, product):  # type: ignore[no-untyped-def]
+    c0, c1, c2, c3 = w[0, 0], w[0, 1], w[0, 2], w[0, 3]
+    s0, s1, s2, s3 = w[1, 0], w[1, 1], w[1, 2], w[1, 3]
+    p0, p1, p2, p3 = w[2, 0], w[2, 1], w[2, 2], w[2, 3]
+    q0, q1, q2, q3 = w[3, 0], w[3, 1], w[3, 2], w[3, 3]
+    across_re = across_im = down_re = down_im = np.float32(0)
+    for x in range(folded.shape[1]):
+        a = folded[0, x] * c0 + folded[1, x] * c1 + folded[2, x] * c2 + folded[3, x] * c3
+        b = folded[4, x] * s0 + folded[5, x] * s1 + folded[6, x] * s2 + folded[7, x] * s3
+        p = folded[4, x] * p0 + folded[5, x] * p1 + folded[6, x] * p2 + folded[7, x] * p3
+        q = folded[0, x] * q0 + folded[1, x] * q1 + folded[2, x] * q2 + folded[3, x] * q3
+        re = a * wave[0, x] - b * wave[1, x]
+        im = a * wave[1, x] + b * wave[0, x]
+        across_re += re * position[x]
+        across_im += im * position[x]
+        down_re += p * wave[0, x] - q * wave[1, x]
+        down_im += p * wave[1, x] + q * wave[0, x]
+        product[0, x] = re
+        product[1, x] = im
+    return across_re + 1j * across_im, down_re + 1j * down_im
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_FAST)
+def _four_rows(folded, w, wave, position, product):  # type: ignore[no-untyped-def]
+    c0, c1, s0, s1 = w[0, 0], w[0, 1], w[1, 0], w[1, 1]
+    p0, p1, q0, q1 = w[2, 0], w[2, 1], w[3, 0], w[3, 1]
+    across_re = across_im = down_re = down_im = np.float32(0)
+    for x in range(folded.shape[1]):
+        a = folded[0, x] * c0 + folded[1, x] * c1
+        b = folded[2, x] * s0 + folded[3, x] * s1
+        p = folded[2, x] * p0 + folded[3, x] * p1
+        q = folded[0, x] * q0 + folded[1, x] * q1
+        re = a * wave[0, x] - b * wave[1, x]
+        im = a * wave[1, x] + b * wave[0, x]
+        across_re += re * position[x]
+        across_im += im * position[x]
+        down_re += p * wave[0, x] - q * wave[1, x]
+        down_im += p * wave[1, x] + q * wave[0, x]
+        product[0, x] = re
+        product[1, x] = im
+    return across_re + 1j * across_im, down_re + 1j * down_im
+
+
+@numba.njit(cache=True, nogil=True)
+def _block_sums(line, size, scratch):  # type: ignore[no-untyped-def]
+    """Return the sums of each `size` (4 or 8) neighbouring values of a line, which become its own first values."""
+    _sums_of_pairs(line, line.size // 2, scratch[0])
+    _sums_of_pairs(scratch[0], line.size // 4, line)
+    if size == 4:
+        return line
+    _sums_of_pairs(line, line.size // 8, scratch[1])
+    line[: line.size // 8] = scratch[1, : line.size // 8]
+    return line
+
+
+@numba.njit(cache=True, nogil=True)
+def _sums_of_pairs(line, count, out):  # type: ignore[no-untyped-def]
+    for x in range(count):
+        out[x] = line[2 * x] + line[2 * x + 1]
 
 
 def demodulate(pixels: RegionPixels, frequency: NDArray[np.float64]) -> Demodulation:
@@ -199,8 +223,67 @@ def demodulate(pixels: RegionPixels, frequency: NDArray[np.float64]) -> Demodula
     size = block_size(pixels.footprint)
     blocks = np.empty((len(frequency), -(-ny // size), -(-nx // size)), np.complex64)
     moments = np.zeros((len(frequency), 3), np.complex128)
-    _demodulate(pixels.values, pixels.footprint.spans, pixels.trend, frequency, size, blocks, moments)
+    if len(frequency):
+        _demodulate(pixels.values, pixels.footprint.spans, pixels.trend, frequency, size, blocks, moments)
     return Demodulation(frequency, blocks, size, moments)
+
+
+def turned(demodulation: Demodulation, footprint: Footprint, step: NDArray[np.float64]) -> Demodulation:
+    """Return the demodulation at frequencies a small step away, from the sums over blocks alone.
+
+    Within a block the sums keep the phase that the step would turn by up to pi d size / n, n the pixels across the region
+    and d the step in bins, so that a fitted position is off by some d (size / n)^2 bins.
+
+    Parameters
+    ----------
+    demodulation : Demodulation
+    footprint : Footprint
+        Of the region that was demodulated.
+    step : ndarray, shape (n, 2)
+        Change of the frequencies, cycles per pixel.
+
+    Returns
+    -------
+    Demodulation
+    """
+    blocks, moments = np.empty_like(demodulation.blocks), np.empty_like(demodulation.moments)
+    _turn(demodulation.blocks, demodulation.moments, demodulation.block, *footprint.shape, step, blocks, moments)
+    return Demodulation(demodulation.frequency + step, blocks, demodulation.block, moments)
+
+
+@numba.njit(cache=True, nogil=True, fastmath=_FAST)
+def _turn(blocks, moments, size, ny, nx, step, turned_blocks, turned_moments):  # type: ignore[no-untyped-def]
+    down, across = blocks.shape[1], blocks.shape[2]
+    y = np.arange(down) * size + (size - ny) / 2
+    x = np.arange(across) * size + (size - nx) / 2
+    for k in range(blocks.shape[0]):
+        waves = np.exp(-2j * np.pi * step[k, 1] * x)
+        before_y = 0j
+        before_x = 0j
+        total = 0j
+        after_y = 0j
+        after_x = 0j
+        for i in range(down):
+            turn = np.exp(-2j * np.pi * step[k, 0] * y[i])
+            row_before = 0j
+            row_after = 0j
+            for j in range(across):
+                value = blocks[k, i, j]
+                row_before += value
+                before_x += x[j] * value
+                value = np.complex128(value) * waves[j] * turn
+                turned_blocks[k, i, j] = value
+                row_after += value
+                after_x += x[j] * value
+            before_y += y[i] * row_before
+            after_y += y[i] * row_after
+            total += row_after
+        # what the places within the blocks add to the moments, and its own turn to first order
+        within_y = moments[k, 1] - before_y
+        within_x = moments[k, 2] - before_x
+        turned_moments[k, 0] = total - 2j * np.pi * (step[k, 0] * within_y + step[k, 1] * within_x)
+        turned_moments[k, 1] = after_y + within_y
+        turned_moments[k, 2] = after_x + within_x
 
 
 def block_size(footprint: Footprint) -> int:

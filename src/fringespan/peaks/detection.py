@@ -14,6 +14,7 @@ from functools import lru_cache
 
 import numba
 import numpy as np
+import scipy.fft
 from numpy.typing import NDArray
 from scipy.special import lambertw
 
@@ -21,7 +22,15 @@ from fringespan.noise import RingBackground, kth_smallest, trimmed_mean
 from fringespan.region import Footprint
 from fringespan.spectrum import PowerSpectrum, taper
 
-__all__ = ["Candidates", "density_at", "detection_threshold", "find_candidates", "matched_ratio_at", "tapered_maximum", "waves_removed"]
+__all__ = [
+    "Candidates",
+    "density_at",
+    "detection_threshold",
+    "find_candidates",
+    "matched_ratio_at",
+    "tapered_maximum",
+    "waves_removed",
+]
 
 _FIRST_PASS = 0.36
 """Share of the detection threshold that a bin alone must reach over the rings; a tapered bin between two sees a third."""
@@ -580,16 +589,23 @@ def waves_removed(
     window = _window_response(footprint)
     shape = np.array(spectrum.shape)
     middle = (np.array(footprint.shape) - 1) / 2
-    reach = window.reach
-    saved = np.empty((len(frequency), 2 * reach + 1, 2 * reach + 1), np.complex64)
+    # never round a small spectrum to the same bin again
+    reach = min(window.reach, (shape[0] - 1) // 2), min(window.reach, (shape[1] - 1) // 2)
+    saved = np.empty((len(frequency), 2 * reach[0] + 1, 2 * reach[1] + 1), np.complex64)
     block_maxima = spectrum.block_maxima.copy()
     scale = np.float32(1 / taper(footprint).power)
-    arguments = spectrum.transform, spectrum.power, spectrum.block_maxima, scale, spectrum.shape[1], reach
-    _remove(*arguments, frequency * shape, amplitude, middle / shape, window.rows, window.columns, window.plane, saved)
+    # of the two opposite vectors of a wave the one whose column is not negative
+    flipped = frequency[:, 1] < 0
+    place = np.where(flipped[:, None], -frequency, frequency) * shape
+    amplitude = np.where(flipped, np.conj(amplitude), amplitude)
+    arguments = spectrum.transform, spectrum.power, scale, spectrum.shape[1], *reach, place
+    _remove(
+        *arguments, amplitude, middle / shape, window.rows, window.columns, window.plane, saved, spectrum.block_maxima
+    )
     try:
         yield spectrum
     finally:
-        _restore(*arguments, frequency * shape, saved)
+        _restore(*arguments, saved)
         spectrum.block_maxima[:] = block_maxima
 
 
@@ -610,10 +626,17 @@ def _window_response(footprint: Footprint) -> _WindowResponse:
     if window.oblique is None:
         reach = 20
         shift = np.arange(-16 * (reach + 2), 16 * (reach + 2) + 1) / 16
-        grid = window_transform(footprint, shift, np.zeros(1), power=1)[:, 0] * np.exp(-2j * np.pi * shift * middle[0])
-        rows = grid.real / grid.real.max()
-        grid = window_transform(footprint, np.zeros(1), shift, power=1)[0] * np.exp(-2j * np.pi * shift * middle[1])
-        return _WindowResponse(rows, grid.real / grid.real.max() * window.total, np.empty((0, 0), complex), reach)
+        lines = []
+        for values, length, centre in zip((window.rows, window.columns), window.transform_shape, middle, strict=True):
+            # a transform padded to 16 times its length has the steps wanted
+            padded = scipy.fft.ifft(values.astype(float), 16 * length, norm="forward")
+            lines.append(
+                (padded[np.arange(-(len(shift) // 2), len(shift) // 2 + 1)] * np.exp(-2j * np.pi * shift * centre)).real
+            )
+        rows, columns = lines
+        return _WindowResponse(
+            rows / rows.max(), columns / columns.max() * window.total, np.empty((0, 0), complex), reach
+        )
     reach = 8
     shift = np.arange(-8 * (reach + 2), 8 * (reach + 2) + 1) / 8
     plane = window_transform(footprint, shift, shift, power=1)
@@ -634,54 +657,44 @@ def _cubic_weights(f):  # type: ignore[no-untyped-def]
 
 @numba.njit(cache=True, nogil=True)
 def _remove(  # type: ignore[no-untyped-def]
-    transform, power, block_maxima, scale, nx, reach, place, amplitude, middle, rows, columns, plane, saved
+    transform, power, scale, nx, reach_y, reach_x, place, amplitude, middle, rows, columns, plane, saved, block_maxima
 ):
     ny = transform.shape[0]
-    width = 2 * reach + 1
-    line_y = np.empty(width, np.complex128)
-    line_x = np.empty(width, np.complex128)
+    touched = np.zeros(block_maxima.shape, np.bool_)
+    line_x = np.empty(2 * reach_x + 1, np.complex128)
     for k in range(place.shape[0]):
         iy, ix = int(np.rint(place[k, 0])), int(np.rint(place[k, 1]))
-        for a in range(width):
-            i, j = iy + a - reach, ix + a - reach
-            line_y[a] = np.exp(-2j * np.pi * i * middle[0])
-            line_x[a] = np.exp(-2j * np.pi * j * middle[1])
+        for b in range(2 * reach_x + 1):
+            j = ix + b - reach_x
+            line_x[b] = np.exp(-2j * np.pi * j * middle[1])
+            if columns.size:
+                line_x[b] *= _interpolated(columns, (place[k, 1] - j) * 16)
+        for a in range(2 * reach_y + 1):
+            i = iy + a - reach_y
+            factor = amplitude[k] * np.exp(-2j * np.pi * i * middle[0])
             if rows.size:
-                p = (place[k, 0] - i) * 16 + rows.size // 2
-                q = int(np.floor(p))
-                w = _cubic_weights(p - q)
-                line_y[a] *= w[0] * rows[q - 1] + w[1] * rows[q] + w[2] * rows[q + 1] + w[3] * rows[q + 2]
-                p = (place[k, 1] - j) * 16 + columns.size // 2
-                q = int(np.floor(p))
-                w = _cubic_weights(p - q)
-                line_x[a] *= w[0] * columns[q - 1] + w[1] * columns[q] + w[2] * columns[q + 1] + w[3] * columns[q + 2]
-        for a in range(width):
-            for b in range(width):
-                value = amplitude[k] * line_y[a] * line_x[b]
-                if plane.shape[0]:
-                    p = (place[k, 0] - (iy + a - reach)) * 8 + plane.shape[0] // 2
-                    q = int(np.floor(p))
-                    wy = _cubic_weights(p - q)
-                    p = (place[k, 1] - (ix + b - reach)) * 8 + plane.shape[1] // 2
-                    r = int(np.floor(p))
-                    wx = _cubic_weights(p - r)
-                    response = 0j
-                    for m in range(4):
-                        for n in range(4):
-                            response += wy[m] * wx[n] * plane[q - 1 + m, r - 1 + n]
-                    value *= response
-                i, j, conjugate = _mirrored(iy + a - reach, ix + b - reach, ny, nx)
-                saved[k, a, b] = transform[i, j]
-                z = transform[i, j] - (np.conj(value) if conjugate else value)
-                transform[i, j] = z
-                power[i, j] = (z.real * z.real + z.imag * z.imag) * scale
-    for k in range(place.shape[0]):
-        iy, ix = int(np.rint(place[k, 0])), int(np.rint(place[k, 1]))
-        # every block of eight that the square touches
-        for a in range(-reach, reach + 8, 8):
-            for b in range(-reach, reach + 8, 8):
-                i, j, _ = _mirrored(iy + min(a, reach), ix + min(b, reach), ny, nx)
-                by, bx = i // 8, j // 8
+                factor *= _interpolated(rows, (place[k, 0] - i) * 16)
+            row, opposite = i % ny, -i % ny
+            for b in range(2 * reach_x + 1):
+                j = ix + b - reach_x
+                value = factor * line_x[b]
+                if plane.size:
+                    value *= _interpolated_in_plane(plane, (place[k, 0] - i) * 8, (place[k, 1] - j) * 8)
+                # the other half of the spectrum is stored as the conjugate of this one
+                y, x = row, j
+                if j < 0:
+                    y, x, value = opposite, -j, np.conj(value)
+                elif 2 * j > nx:
+                    y, x, value = opposite, nx - j, np.conj(value)
+                z = transform[y, x]
+                saved[k, a, b] = z
+                z = np.complex64(z - value)
+                transform[y, x] = z
+                power[y, x] = (z.real * z.real + z.imag * z.imag) * scale
+                touched[y >> 3, x >> 3] = True
+    for by in range(touched.shape[0]):
+        for bx in range(touched.shape[1]):
+            if touched[by, bx]:
                 highest = np.float32(0)
                 for y in range(8 * by, min(8 * by + 8, ny)):
                     for x in range(8 * bx, min(8 * bx + 8, power.shape[1])):
@@ -689,15 +702,47 @@ def _remove(  # type: ignore[no-untyped-def]
                 block_maxima[by, bx] = highest
 
 
+@numba.njit(cache=True, nogil=True, inline="always")
+def _interpolated(line, steps):  # type: ignore[no-untyped-def]
+    """Return the value at a number of steps from the middle of a line."""
+    p = steps + line.size // 2
+    q = int(np.floor(p))
+    w = _cubic_weights(p - q)
+    return w[0] * line[q - 1] + w[1] * line[q] + w[2] * line[q + 1] + w[3] * line[q + 2]
+
+
 @numba.njit(cache=True, nogil=True)
-def _restore(transform, power, block_maxima, scale, nx, reach, place, saved):  # type: ignore[no-untyped-def]
+def _interpolated_in_plane(plane, steps_y, steps_x):  # type: ignore[no-untyped-def]
+    """Return the value at a number of steps from the middle of a plane."""
+    p = steps_y + plane.shape[0] // 2
+    q = int(np.floor(p))
+    wy = _cubic_weights(p - q)
+    p = steps_x + plane.shape[1] // 2
+    r = int(np.floor(p))
+    wx = _cubic_weights(p - r)
+    value = 0j
+    for m in range(4):
+        for n in range(4):
+            value += wy[m] * wx[n] * plane[q - 1 + m, r - 1 + n]
+    return value
+
+
+@numba.njit(cache=True, nogil=True)
+def _restore(transform, power, scale, nx, reach_y, reach_x, place, saved):  # type: ignore[no-untyped-def]
     ny = transform.shape[0]
     # backwards, so that where two squares overlap the first saved value comes last
     for k in range(place.shape[0] - 1, -1, -1):
         iy, ix = int(np.rint(place[k, 0])), int(np.rint(place[k, 1]))
-        for a in range(2 * reach, -1, -1):
-            for b in range(2 * reach, -1, -1):
-                i, j, _ = _mirrored(iy + a - reach, ix + b - reach, ny, nx)
+        for a in range(2 * reach_y, -1, -1):
+            i = iy + a - reach_y
+            row, opposite = i % ny, -i % ny
+            for b in range(2 * reach_x, -1, -1):
+                j = ix + b - reach_x
+                y, x = row, j
+                if j < 0:
+                    y, x = opposite, -j
+                elif 2 * j > nx:
+                    y, x = opposite, nx - j
                 z = saved[k, a, b]
-                transform[i, j] = z
-                power[i, j] = (z.real * z.real + z.imag * z.imag) * scale
+                transform[y, x] = z
+                power[y, x] = (z.real * z.real + z.imag * z.imag) * scale

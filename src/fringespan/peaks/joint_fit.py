@@ -19,7 +19,7 @@ import numba
 import numpy as np
 from numpy.typing import NDArray
 
-from fringespan.peaks.demodulation import Demodulation, demodulate
+from fringespan.peaks.demodulation import Demodulation, demodulate, turned
 from fringespan.region import Footprint
 from fringespan.spectrum import RegionPixels
 
@@ -28,6 +28,9 @@ __all__ = ["JointFit", "fit_jointly"]
 _MOST_STEPS = 8
 _PRIOR_BINS = 0.6
 """Standard deviation, in bins, of where detection says a peak is; it only matters for peaks that are hardly there."""
+
+_COARSE = 4e-4
+"""Largest (block / region)^2 at which sums over blocks are trusted beside much stronger waves: 200 pixels in fours."""
 
 
 @dataclass(frozen=True, eq=False, slots=True)
@@ -266,6 +269,7 @@ def fit_jointly(
     kept = np.arange(len(start.frequency))
     demodulation = start
     bins = 1 / np.array(pixels.footprint.shape)
+    coarseness = (start.block / min(pixels.footprint.shape)) ** 2
     for round_number in range(_MOST_STEPS):
         while True:
             amplitude, step, covariance = solve_waves(pixels.footprint, demodulation, density[kept])
@@ -286,7 +290,13 @@ def fit_jointly(
             break
         # never further than a linear step can be trusted: half a bin
         step *= np.minimum(1, 0.5 / np.maximum(longest, 1e-9))[:, None]
-        demodulation = demodulation.replaced(~settled, demodulate(pixels, (demodulation.frequency + step)[~settled]))
+        # a step that the sums over blocks can follow needs no new pass over the pixels
+        short = ~settled & (10 * longest * coarseness < 0.05 * sigma.min(axis=1)) & (coarseness < _COARSE)
+        far = ~settled & ~short
+        if short.any():
+            demodulation = demodulation.replaced(short, turned(demodulation.part(short), pixels.footprint, step[short]))
+        if far.any():
+            demodulation = demodulation.replaced(far, demodulate(pixels, (demodulation.frequency + step)[far]))
     frequency = demodulation.frequency + step if len(kept) else np.empty((0, 2))
     return JointFit(frequency, amplitude, covariance, power_ratio, demodulation), kept
 

@@ -3,6 +3,7 @@
 from fringespan.record.document import SCHEMA, document_of, plain_values, record_from, record_schema
 from fringespan.record.file import json_text, read_record, read_regions, write_record
 from fringespan.record.identification import identifications_of
+from fringespan.record.magnification import magnification_values
 from fringespan.record.values import Identification, Match, Record, RecordedPicture, RecordedRegion, record_of
 
 __all__ = [
@@ -15,6 +16,7 @@ __all__ = [
     "document_of",
     "identifications_of",
     "json_text",
+    "magnification_values",
     "plain_values",
     "read_record",
     "read_regions",

@@ -182,7 +182,10 @@ class Record:
 
 
 def record_of(
-    measurements: Sequence[Measurement], identifications: Sequence[Identification | None] | None = None
+    measurements: Sequence[Measurement],
+    identifications: Sequence[Identification | None] | None = None,
+    *,
+    magnification: Mapping[str, Any] | None = None,
 ) -> Record:
     """Collect the measurements of one picture into a record.
 
@@ -192,6 +195,8 @@ def record_of(
         At least one; all of the same picture with the same settings.
     identifications : sequence of Identification or None, optional
         One for each measurement, where phases were compared.
+    magnification : mapping, optional
+        A magnification check that the picture took part in, as `magnification_values` gives it.
 
     Returns
     -------
@@ -218,6 +223,7 @@ def record_of(
             _recorded_region(m, identification or Identification())
             for m, identification in zip(measurements, found, strict=True)
         ),
+        magnification=magnification,
         cautions=gravest_first(micrograph.cautions),
     )
 

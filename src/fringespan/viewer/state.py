@@ -354,7 +354,7 @@ class MeasuringState:
             self.work_wanted.emit()
 
     def _settle(self, sheet: _Sheet) -> None:
-        """Number peaks by their strength again, now that nothing moves, and complain of what went wrong."""
+        """Give peaks numbers by their strength again, now that nothing moves, and complain of what went wrong."""
         for key, region in sheet.regions.items():
             if region.measurement is not None and list(region.rows) != sorted(region.rows):
                 sheet.regions[key] = replace(region, rows=tuple(range(len(region.measurement.peaks))))

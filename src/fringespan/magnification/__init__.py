@@ -1,0 +1,1 @@
+"""Whether the microscope's magnification is right: check, uncertainty budget, verdict, log."""
