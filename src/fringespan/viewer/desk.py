@@ -229,6 +229,8 @@ class Desk:
             if removed is self._picture:
                 self._leave_picture()
             self.state.forget_picture(str(removed.unique_id))
+            if self._pixels is not None and self._pixels[0] is _stored(removed):
+                self._pixels = None
             self._on_layers()
         elif removed is self._regions:
             self._release_regions()
@@ -252,7 +254,7 @@ class Desk:
             for emitter in (events.scale, events.units, events.name, events.data, events.affine):
                 emitter.disconnect(self._on_frame)
         self._release_regions()
-        self._picture, self._lines, self._pixels = None, {}, None
+        self._picture, self._lines = None, {}
 
     def _on_frame(self, event: Any = None) -> None:
         if not self._writing and self._picture is not None:
@@ -271,10 +273,11 @@ class Desk:
             return False
         self._problem = None
         key = str(layer.unique_id)
-        if self._pixels is not None and self._pixels[:2] == (id(layer.data), micrograph.frame):
+        stored, last = _stored(layer), self._pixels
+        if last is not None and last[0] is stored and last[1] == micrograph.frame:
             # the same pixels stay the same object: only then can a measurement be told in other units
-            micrograph = replace(micrograph, pixels=self._pixels[2].pixels)
-        self._pixels = (id(layer.data), micrograph.frame, micrograph)
+            micrograph = replace(micrograph, pixels=last[2].pixels)
+        self._pixels = (stored, micrograph.frame, micrograph)
         known = self.state.micrograph if self.state.picture == key else None
         self.state.show_picture(key, micrograph)
         if known is not None and (known.pixel_size_nm, known.shear) != (micrograph.pixel_size_nm, micrograph.shear):
@@ -403,3 +406,8 @@ class Desk:
             yield
         finally:
             self._writing = before
+
+
+def _stored(layer: Image) -> Any:
+    """Return the array that a layer was made from, of a pyramid its finest."""
+    return layer.data[0] if layer.multiscale else layer.data

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import weakref
-from collections.abc import Callable
+from functools import partial
 from typing import TYPE_CHECKING, Any
 
 from qtpy.QtWidgets import QWidget
@@ -39,36 +39,29 @@ class Workplace:
         self.state = MeasuringState(remembered_unit())
         self.desk = Desk(viewer, self.state)
         self.measurer: Measurer | None = None
-        self._docks = 0
+        self._docks: set[int] = set()
         self.state.unit_changed.connect(self._remember)
         self.state.complained.connect(_notify)
 
-    def attach(self, dock: QWidget, *followed: tuple[Any, Callable[..., object]]) -> None:
-        """Take in a dock.
-
-        Parameters
-        ----------
-        dock : QWidget
-        *followed : (signal, method)
-            Signals of the state, and the methods of the dock that they call until it is destroyed.
-        """
+    def enter(self, dock: QWidget) -> None:
+        """Take in a dock."""
         if self.measurer is None:
             self.measurer = Measurer(self.state)
             self.desk.open()
-        self._docks += 1
-        for signal, method in followed:
-            signal.connect(method)
+        self._docks.add(id(dock))
+        # a window that is closed destroys its docks without taking them out first
+        dock.destroyed.connect(partial(self._leave, id(dock)))
 
-        def leave() -> None:
-            for signal, method in followed:
-                signal.disconnect(method)
-            self._docks -= 1
-            if self._docks == 0 and self.measurer is not None:
-                self.measurer.close()
-                self.measurer = None
-                self.desk.close()
+    def leave(self, dock: QWidget) -> None:
+        """Let a dock go; with the last one measuring ends."""
+        self._leave(id(dock))
 
-        dock.destroyed.connect(leave)
+    def _leave(self, dock: int, _destroyed: object = None) -> None:
+        self._docks.discard(dock)
+        if not self._docks and self.measurer is not None:
+            self.measurer.close()
+            self.measurer = None
+            self.desk.close()
 
     def _remember(self) -> None:
         remember_unit(self.state.unit)

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import replace
+from functools import partial
 from typing import TYPE_CHECKING
 
 from qtpy.QtCore import Qt
@@ -22,10 +24,9 @@ from qtpy.QtWidgets import (
 
 from fringespan.exceptions import FringespanError
 from fringespan.export.plain_text import one_line, shortened
-from fringespan.viewer.desk import Tool
+from fringespan.viewer.docks.dock import Dock
 from fringespan.viewer.state import Calibration
 from fringespan.viewer.wording import picture_words, region_words
-from fringespan.viewer.workplace import workplace_of
 
 if TYPE_CHECKING:
     import napari.viewer
@@ -40,13 +41,12 @@ _NO_PIXEL_SIZE = (
 _NO_REGION = "1. Choose a shape.  2. Draw it inside one grain, never across two.  3. Drag it and watch the spacings."
 
 
-class PictureDock(QWidget):
+class PictureDock(Dock):
     """Picture line, calibration form, region line and shape tools."""
 
     def __init__(self, viewer: napari.viewer.Viewer) -> None:
-        super().__init__()
-        workplace = workplace_of(viewer)
-        self._state, self._desk = workplace.state, workplace.desk
+        super().__init__(viewer)
+        self._state, self._desk = self.workplace.state, self.workplace.desk
         layout = QVBoxLayout(self)
         layout.setContentsMargins(6, 4, 6, 4)
         layout.setSpacing(4)
@@ -55,13 +55,11 @@ class PictureDock(QWidget):
         layout.addLayout(self._region_line())
         layout.addLayout(self._tools())
         layout.addStretch(1)
-        self.setMinimumWidth(260)
         # what this dock does not need is the table's
         self.setSizePolicy(QSizePolicy.Policy.Preferred, QSizePolicy.Policy.Maximum)
         self._add_shortcuts()
         state = self._state
-        workplace.attach(
-            self,
+        self.follow(
             (state.picture_changed, self._show_picture),
             (state.regions_changed, self._show_region),
             (state.region_measured, self._on_measured),
@@ -120,8 +118,8 @@ class PictureDock(QWidget):
             _small_button("<", "Previous region (Page Up)"),
             _small_button(">", "Next region (Page Down)"),
         )
-        self.previous.clicked.connect(lambda: self._state.step_region(-1))
-        self.following.clicked.connect(lambda: self._state.step_region(1))
+        self.previous.clicked.connect(partial(_ignoring_checked, partial(self._state.step_region, -1)))
+        self.following.clicked.connect(partial(_ignoring_checked, partial(self._state.step_region, 1)))
         self.region_name = QLineEdit()
         self.region_name.setAccessibleName("Name of the region")
         self.region_name.setToolTip("Name of the region; type to change it")
@@ -144,30 +142,32 @@ class PictureDock(QWidget):
         return both
 
     def _tools(self) -> QGridLayout:
+        # no function here holds the dock itself, which would then never end
+        desk = self._desk
         self.tools: dict[str, QPushButton] = {}
         grid = QGridLayout()
         grid.setSpacing(3)
-        commands = {
-            "Rectangle": (lambda: self._draw("rectangle"), "Draw a rectangle inside one grain"),
-            "Ellipse": (lambda: self._draw("ellipse"), "Draw an ellipse inside one grain"),
-            "Polygon": (lambda: self._draw("polygon"), "Draw a polygon: click its corners, double click the last"),
-            "Whole picture": (self._desk.add_whole_picture, "Measure everything in the picture"),
-            "Move": (self._desk.select_and_move, "Move, resize and turn regions"),
-            "Remove": (self._desk.remove_current, "Remove the current region"),
+        commands: dict[str, tuple[Callable[[], None], str]] = {
+            "Rectangle": (partial(desk.draw, "rectangle"), "Draw a rectangle inside one grain"),
+            "Ellipse": (partial(desk.draw, "ellipse"), "Draw an ellipse inside one grain"),
+            "Polygon": (partial(desk.draw, "polygon"), "Draw a polygon: click its corners, double click the last"),
+            "Whole picture": (desk.add_whole_picture, "Measure everything in the picture"),
+            "Move": (desk.select_and_move, "Move, resize and turn regions"),
+            "Remove": (desk.remove_current, "Remove the current region"),
         }
         for place, (name, (command, tip)) in enumerate(commands.items()):
             button = QPushButton(name)
             button.setToolTip(tip)
             button.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Fixed)
-            button.clicked.connect(lambda _checked=False, command=command: command())
+            button.clicked.connect(partial(_ignoring_checked, command))
             grid.addWidget(button, place // 3, place % 3)
             self.tools[name] = button
         return grid
 
     def _add_shortcuts(self) -> None:
         for keys, command in (
-            ("PgUp", lambda: self._state.step_region(-1)),
-            ("PgDown", lambda: self._state.step_region(1)),
+            ("PgUp", partial(self._state.step_region, -1)),
+            ("PgDown", partial(self._state.step_region, 1)),
             ("Ctrl+Z", self._on_undo),
         ):
             shortcut = QShortcut(QKeySequence(keys), self)
@@ -175,9 +175,6 @@ class PictureDock(QWidget):
             shortcut.activated.connect(command)
 
     # --- commands ---------------------------------------------------------------------------------------------------
-
-    def _draw(self, tool: Tool) -> None:
-        self._desk.draw(tool)
 
     def _rename(self) -> None:
         current = self._state.current
@@ -297,6 +294,10 @@ class PictureDock(QWidget):
         self.region_place.setText(f"{place} of {len(regions)}")
         words = region_words(current, micrograph)
         self.region_facts.setText(f"{words} · measuring ..." if current.is_pending else words)
+
+
+def _ignoring_checked(command: Callable[[], None], _checked: bool = False) -> None:
+    command()
 
 
 class _NotANumberError(ValueError):

@@ -21,9 +21,9 @@ from qtpy.QtWidgets import (
     QStyleOptionViewItem,
     QTableView,
     QVBoxLayout,
-    QWidget,
 )
 
+from fringespan.viewer.docks.dock import Dock
 from fringespan.viewer.docks.spacings_model import COLUMNS, PARTS_ROLE, SORT_ROLE, SpacingsModel
 from fringespan.viewer.state import MeasuredRegion, Unit
 from fringespan.viewer.wording import (
@@ -34,7 +34,6 @@ from fringespan.viewer.wording import (
     result_words,
     table_text,
 )
-from fringespan.viewer.workplace import workplace_of
 
 if TYPE_CHECKING:
     import napari.viewer
@@ -46,13 +45,12 @@ _PART_COLOURS = ("#E69F00", "#56B4E9", "#009E73")
 _HIDDEN_AT_FIRST = ("S/N", "lattice", "d lattice", "visibility")
 
 
-class SpacingsDock(QWidget):
+class SpacingsDock(Dock):
     """Spacings of the current region."""
 
     def __init__(self, viewer: napari.viewer.Viewer) -> None:
-        super().__init__()
-        workplace = workplace_of(viewer)
-        self._state = workplace.state
+        super().__init__(viewer)
+        self._state = self.workplace.state
         self._all_cautions = False
         self._make_table()
         self._make_words()
@@ -77,10 +75,8 @@ class SpacingsDock(QWidget):
         layout.addWidget(self.table, 3)
         layout.addLayout(line)
         layout.addWidget(self.caution_area, 2)
-        self.setMinimumWidth(260)
         state = self._state
-        workplace.attach(
-            self,
+        self.follow(
             (state.picture_changed, self._show),
             (state.regions_changed, self._show),
             (state.region_measured, self._on_measured),
@@ -156,9 +152,11 @@ class SpacingsDock(QWidget):
             action.setCheckable(True)
             action.setChecked(not self.table.isColumnHidden(column))
             action.setEnabled(name != "number")
-            action.toggled.connect(lambda shown, column=column: self.table.setColumnHidden(column, not shown))
+            action.setData(column)
             menu.addAction(action)
-        menu.exec(self.table.horizontalHeader().mapToGlobal(place))
+        chosen = menu.exec(self.table.horizontalHeader().mapToGlobal(place))
+        if chosen is not None:
+            self.table.setColumnHidden(chosen.data(), not chosen.isChecked())
         menu.deleteLater()
 
     def _toggle_cautions(self, _link: str = "") -> None:

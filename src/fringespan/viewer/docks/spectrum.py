@@ -5,10 +5,10 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from qtpy.QtCore import Qt
-from qtpy.QtWidgets import QHBoxLayout, QLabel, QSizePolicy, QSlider, QVBoxLayout, QWidget
+from qtpy.QtWidgets import QHBoxLayout, QLabel, QSizePolicy, QSlider, QVBoxLayout
 
+from fringespan.viewer.docks.dock import Dock
 from fringespan.viewer.spectrum_panel import SpectrumPanel
-from fringespan.viewer.workplace import workplace_of
 
 if TYPE_CHECKING:
     import napari.viewer
@@ -18,13 +18,12 @@ __all__ = ["SpectrumDock"]
 _HINT = "Point at the spectrum to read a spacing."
 
 
-class SpectrumDock(QWidget):
+class SpectrumDock(Dock):
     """The spectrum of the current region."""
 
     def __init__(self, viewer: napari.viewer.Viewer) -> None:
-        super().__init__()
-        workplace = workplace_of(viewer)
-        self._state = workplace.state
+        super().__init__(viewer)
+        self._state = self.workplace.state
         self.panel = SpectrumPanel()
         self.panel.peak_picked.connect(self._state.select_peak)
         self.panel.pointed.connect(self._show_pointer)
@@ -44,10 +43,8 @@ class SpectrumDock(QWidget):
         layout.setSpacing(3)
         layout.addWidget(self.panel, 1)
         layout.addLayout(line)
-        self.setMinimumWidth(260)
         state = self._state
-        workplace.attach(
-            self,
+        self.follow(
             (state.picture_changed, self._show),
             (state.regions_changed, self._show),
             (state.region_measured, self._on_measured),
