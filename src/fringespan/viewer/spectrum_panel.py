@@ -50,6 +50,9 @@ _RADII = (1.0, 0.75, 0.5, 0.35, 0.25, 0.18, 0.12)
 """How much of the spectrum is shown by itself, as shares of `_NYQUIST`: in steps, so that the view does not creep."""
 
 _RING_SPACINGS = (0.05, 0.1, 0.2, 0.5, 1.0, 2.0, 5.0, 10.0, 20.0, 50.0)
+_RING_LABELS = math.radians(235)
+"""Where the circles' labels stand: on the left, where the marks have no numbers."""
+
 _MARK_RADIUS = 6.0
 _CLICK_RADIUS = 11.0
 
@@ -308,7 +311,7 @@ class SpectrumPanel(QGraphicsView):
                 font.setPointSizeF(7.5)
                 label.setFont(font)
                 label.setFlag(QGraphicsItem.GraphicsItemFlag.ItemIgnoresTransformations)
-                label.setPos(radius * math.cos(0.9), radius * math.sin(0.9))
+                label.setPos(radius * math.cos(_RING_LABELS), radius * math.sin(_RING_LABELS))
                 self._guides += [ring, label]
         corners = [(-0.5, -0.5), (-0.5, 0.5), (0.5, 0.5), (0.5, -0.5)]
         pen = QPen(QColor(255, 255, 255, 110), 0, Qt.PenStyle.DashLine)

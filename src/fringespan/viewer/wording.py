@@ -151,7 +151,9 @@ def region_words(region: MeasuredRegion, micrograph: Micrograph) -> str:
     size = micrograph.pixel_size_nm
     said = f"{height:.0f} x {width:.0f} px" if size is None else f"{height * size[0]:.1f} x {width * size[1]:.1f} nm"
     measurement = region.measurement
-    if measurement is not None and measurement.peaks and measurement.crystal_outline_px is not None:
+    if measurement is None or region.is_stale:
+        return said
+    if measurement.peaks and measurement.crystal_outline_px is not None:
         count = float(np.ptp(measurement.crystal_outline_px @ measurement.peaks[0].g_per_px))
         said += f", {count:.0f} fringes across" if count >= 1.5 else ", a single fringe across"
     return said

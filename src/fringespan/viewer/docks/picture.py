@@ -25,6 +25,7 @@ from qtpy.QtWidgets import (
 from fringespan.exceptions import FringespanError
 from fringespan.export.plain_text import one_line, shortened
 from fringespan.viewer.docks.dock import Dock
+from fringespan.viewer.docks.wrapped_label import WrappedLabel
 from fringespan.viewer.state import Calibration
 from fringespan.viewer.wording import picture_words, region_words
 
@@ -70,7 +71,7 @@ class PictureDock(Dock):
     # --- parts ------------------------------------------------------------------------------------------------------
 
     def _picture_line(self) -> QVBoxLayout:
-        self.picture_name = _wrapped_label()
+        self.picture_name = WrappedLabel()
         self.picture_name.setStyleSheet("font-weight: bold")
         self.calibrate = QToolButton()
         self.calibrate.setText("Calibrate")
@@ -80,7 +81,7 @@ class PictureDock(Dock):
         line = QHBoxLayout()
         line.addWidget(self.picture_name, 1)
         line.addWidget(self.calibrate, 0, Qt.AlignmentFlag.AlignTop)
-        self.picture_facts = _wrapped_label()
+        self.picture_facts = WrappedLabel()
         both = QVBoxLayout()
         both.setSpacing(2)
         both.addLayout(line)
@@ -94,7 +95,7 @@ class PictureDock(Dock):
         self.uncertainty.setPlaceholderText("not stated")
         self.voltage = _field("Beam voltage", "in kV; gives scattering angles")
         self.voltage.setPlaceholderText("not stated")
-        self.form_problem = _wrapped_label()
+        self.form_problem = WrappedLabel()
         self.form_problem.setVisible(False)
         self.undo = QPushButton("Undo")
         self.undo.setToolTip("Take back the last change of the calibration (Ctrl+Z in this dock)")
@@ -134,7 +135,7 @@ class PictureDock(Dock):
             (self.following, 0),
         ):
             line.addWidget(widget, stretch)
-        self.region_facts = _wrapped_label()
+        self.region_facts = WrappedLabel()
         both = QVBoxLayout()
         both.setSpacing(2)
         both.addLayout(line)
@@ -322,17 +323,6 @@ def _numbers_text(numbers: tuple[float, ...] | None) -> str:
 
 def _single(number: float | None) -> tuple[float, ...] | None:
     return None if number is None else (number,)
-
-
-def _wrapped_label() -> QLabel:
-    label = QLabel()
-    label.setWordWrap(True)
-    label.setTextFormat(Qt.TextFormat.PlainText)
-    label.setTextInteractionFlags(Qt.TextInteractionFlag.TextSelectableByMouse)
-    # a long name without spaces must not widen the dock
-    label.setMinimumWidth(1)
-    label.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Preferred)
-    return label
 
 
 def _field(name: str, tip: str) -> QLineEdit:

@@ -24,6 +24,7 @@ from qtpy.QtWidgets import (
 )
 
 from fringespan.viewer.docks.dock import Dock
+from fringespan.viewer.docks.wrapped_label import WrappedLabel
 from fringespan.viewer.docks.spacings_model import COLUMNS, PARTS_ROLE, SORT_ROLE, SpacingsModel
 from fringespan.viewer.state import MeasuredRegion, Unit
 from fringespan.viewer.wording import (
@@ -118,9 +119,9 @@ class SpacingsDock(Dock):
         shortcut.activated.connect(self.copy_table)
 
     def _make_words(self) -> None:
-        self.sentence = _words_label()
+        self.sentence = WrappedLabel()
         self.sentence.setStyleSheet("font-weight: bold")
-        self.banner = _words_label()
+        self.banner = WrappedLabel()
         self.banner.setAccessibleName("Problem")
         self.banner.setObjectName("banner")
         self.cautions = _words_label()
