@@ -20,6 +20,7 @@ import shutil
 import subprocess
 import sys
 import venv
+from ctypes.util import find_library
 from pathlib import Path
 
 OLDEST_PYTHON = (3, 11)
@@ -31,6 +32,32 @@ STAMP = ENVIRONMENT / "installed-for"
 # is used, and its answer told
 SYSTEM_PACKAGES = {
     f"python{sys.version_info.major}.{sys.version_info.minor}-venv": lambda: _has_module("ensurepip"),
+    **(
+        {
+            # the windows of the viewer are tested on a screen in memory, which Qt and OpenGL must find what they need for
+            "xvfb": lambda: shutil.which("Xvfb") is not None,
+            "xauth": lambda: shutil.which("xauth") is not None,
+            **{
+                package: lambda library=library: _has_library(library)
+                for package, library in {
+                    "libegl1": "EGL",
+                    "libgl1": "GL",
+                    "libdbus-1-3": "dbus-1",
+                    "libfontconfig1": "fontconfig",
+                    "libxkbcommon-x11-0": "xkbcommon-x11",
+                    "libx11-xcb1": "X11-xcb",
+                    "libxcb-cursor0": "xcb-cursor",
+                    "libxcb-icccm4": "xcb-icccm",
+                    "libxcb-keysyms1": "xcb-keysyms",
+                    "libxcb-shape0": "xcb-shape",
+                }.items()
+            },
+            "libgl1-mesa-dri": lambda: any(Path("/usr/lib").rglob("swrast_dri.so"))
+            or any(Path("/usr/lib").rglob("libgallium*.so")),
+        }
+        if sys.platform == "linux"
+        else {}
+    ),
 }
 
 
@@ -60,11 +87,17 @@ def main() -> int:
         return _stop(f"the environment could not be made: {' '.join(map(str, failure.cmd))} failed")
     # the names of the markers are those of pyproject.toml
     selected = [] if options.slow else ["-m", "not slow"]
-    return subprocess.run([python, "-m", "pytest", *selected, *for_pytest], cwd=CHECKOUT, check=False).returncode
+    # two processes share the work unless pytest is told otherwise
+    spread = [] if any(a == "-n" or a.startswith("-n") for a in for_pytest) else ["-n", "2"]
+    return subprocess.run(
+        [python, "-m", "pytest", *spread, *selected, *for_pytest], cwd=CHECKOUT, check=False
+    ).returncode
 
 
 def _arguments() -> tuple[argparse.Namespace, list[str]]:
-    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter, allow_abbrev=False
+    )
     parser.add_argument("--slow", action="store_true", help="run the slow tests too")
     parser.add_argument(
         "--install-system-packages", action="store_true", help="install missing Debian packages (needs root or sudo)"
@@ -92,6 +125,10 @@ def _environment() -> Path:
 def _has_module(name: str) -> bool:
     # asked of a Python of its own: this one may have been changed by its surroundings
     return subprocess.run([sys.executable, "-c", f"import {name}"], capture_output=True, check=False).returncode == 0
+
+
+def _has_library(name: str) -> bool:
+    return find_library(name) is not None
 
 
 def _install_command(packages: list[str]) -> list[str] | None:

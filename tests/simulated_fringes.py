@@ -47,7 +47,7 @@ def fringes(shape: tuple[int, int], waves: Sequence[Wave]) -> np.ndarray:
     return picture
 
 
-# --- noise ----------------------------------------------------------------------------------------------------------
+# --- noise -----------------------------------------------------------------------------------------------------------
 
 
 def white(f: np.ndarray) -> np.ndarray:
@@ -108,7 +108,7 @@ def ellipse_mask(shape: tuple[int, int], share: float = 0.98) -> np.ndarray:
     return (2 * y / shape[0]) ** 2 + (2 * x / shape[1]) ** 2 < share**2
 
 
-# --- what a perfect fit reaches -------------------------------------------------------------------------------------
+# --- what a perfect fit reaches --------------------------------------------------------------------------------------
 
 
 def cramer_rao_bound(
@@ -127,7 +127,7 @@ def cramer_rao_bound(
     return 2 * density / (amplitude**2 * 4 * np.pi**2) * np.linalg.inv(centred @ centred.T)
 
 
-# --- asking for the truth back --------------------------------------------------------------------------------------
+# --- asking for the truth back ---------------------------------------------------------------------------------------
 
 
 def random_g(rng: np.random.Generator, shape: tuple[int, int], highest: float = 0.4) -> tuple[float, float]:

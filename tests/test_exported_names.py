@@ -44,7 +44,7 @@ def test_what_scripts_rely_on_is_there(name):
 
 def test_an_unknown_name_is_an_attribute_error():
     with pytest.raises(AttributeError, match="measure_all"):
-        fringespan.measure_all
+        _ = fringespan.measure_all
 
 
 def test_every_module_says_what_it_offers_and_offers_it():

@@ -6,11 +6,11 @@ from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 from scipy import ndimage
-from simulated_fringes import Wave, ellipse_mask, fringes, noise, places, prepared
 from skimage.measure import find_contours, points_in_poly
 
 from fringespan.extent import crystal_footprint, crystal_mask, filled_part, fringe_fields, outline
 from fringespan.peaks.demodulation import demodulate
+from simulated_fringes import Wave, ellipse_mask, fringes, noise, places, prepared
 
 SHAPE = (200, 240)
 WAVE = Wave((0.11, 0.17), 1.0, 0.7)
@@ -29,7 +29,7 @@ def fields_of(values, waves=(WAVE,), width=6.0, mask=None, shift=(0.0, 0.0)):
     return picture, fringe_fields(picture.footprint, demodulated, g, np.full(len(g), width))
 
 
-# --- amplitude and phase ------------------------------------------------------------------------------------------------
+# --- amplitude and phase ---------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("shape", [(200, 240), (123, 77), (450, 420)])
@@ -71,7 +71,7 @@ def test_cells_outside_the_region_are_not_inside():
     assert not fields.inside[radius > 1.1].any()
 
 
-# --- the filled part ----------------------------------------------------------------------------------------------------
+# --- the filled part -------------------------------------------------------------------------------------------------
 
 
 @given(

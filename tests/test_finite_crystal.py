@@ -7,11 +7,11 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from simulated_fringes import Wave, fringes, noise, places, prepared
 
 from fringespan.extent import fringe_fields
 from fringespan.finite_crystal import CrystalFit, crystal_uncertainty, fit_crystal, smoothing_width_px, why_broken
 from fringespan.peaks.demodulation import demodulate
+from simulated_fringes import noise, places, prepared
 
 SHAPE = (240, 240)
 RADIUS = 80.0
@@ -57,7 +57,7 @@ def crystal_of(envelope, phase=0.0, offset=(0.0, 0.0), speckle=0.05):
     return fit_crystal(fields, at, power_ratio, picture.footprint.count)
 
 
-# --- the fit over the crystal's own extent ---------------------------------------------------------------------------------
+# --- the fit over the crystal's own extent ---------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("envelope", [disc, dome, wedge, square])
@@ -117,7 +117,7 @@ def test_a_wavy_phase_is_measured(rms):
     assert 0.6 * rms < crystal.phase_rms[0] < 1.1 * rms
 
 
-# --- broken fringes --------------------------------------------------------------------------------------------------------
+# --- broken fringes --------------------------------------------------------------------------------------------------
 
 
 def reversal():
@@ -164,7 +164,7 @@ def test_sound_fringes_are_not_called_broken(envelope):
     assert why_broken(crystal_of(envelope(), 0.2 * np.cos(2 * np.pi * along_and_across()[0] / 90))) == [None]
 
 
-# --- how far the field is smoothed -----------------------------------------------------------------------------------------
+# --- how far the field is smoothed -----------------------------------------------------------------------------------
 
 
 def test_stronger_fringes_are_smoothed_less_and_close_neighbours_more():
@@ -181,7 +181,7 @@ def test_smoothing_never_exceeds_an_eighth_of_the_region(power_ratio, area):
     assert 0 < width <= math.sqrt(area) / 8
 
 
-# --- the uncertainty that one picture cannot show ----------------------------------------------------------------------------
+# --- the uncertainty that one picture cannot show --------------------------------------------------------------------
 
 
 def stated(phase, plateau, one_sided=None, n=4):

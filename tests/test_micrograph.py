@@ -15,7 +15,7 @@ from fringespan.micrograph import Micrograph
 PIXELS = np.arange(12.0).reshape(3, 4)
 
 
-# --- pixels -----------------------------------------------------------------------------------------------------------
+# --- pixels ----------------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -76,7 +76,7 @@ def test_a_picture_on_disk_is_read_only_where_it_is_cropped():
     assert frame.read == [(slice(10, 30), slice(5, 45))]
 
 
-# --- calibration ------------------------------------------------------------------------------------------------------
+# --- calibration -----------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -168,7 +168,7 @@ def test_all_but_the_pixels_is_given_by_name():
         Micrograph(PIXELS, 0.02)
 
 
-# --- geometry ---------------------------------------------------------------------------------------------------------
+# --- geometry --------------------------------------------------------------------------------------------------------
 
 
 def test_geometry_is_none_without_a_pixel_size():
@@ -186,7 +186,7 @@ def test_one_row_further_is_along_y_and_sheared_along_x(row_nm, column_nm, shear
     assert x == pytest.approx((column + shear * row) * column_nm, abs=1e-9)
 
 
-# --- checksum ---------------------------------------------------------------------------------------------------------
+# --- checksum --------------------------------------------------------------------------------------------------------
 
 
 def test_the_checksum_of_pixels_does_not_depend_on_how_they_lie_in_memory():

@@ -2,6 +2,8 @@
 
 import numpy as np
 import pytest
+
+from fringespan.noise import rings_at
 from simulated_fringes import (
     Wave,
     blurred,
@@ -16,8 +18,6 @@ from simulated_fringes import (
     transfer_rings,
     white,
 )
-
-from fringespan.noise import rings_at
 
 SHAPE = (160, 160)
 RADII = np.array([0.08, 0.12, 0.2, 0.3, 0.42])

@@ -53,7 +53,7 @@ def inside_or_on(row, column, corners):
     return inside
 
 
-# --- pixels that belong -----------------------------------------------------------------------------------------------
+# --- pixels that belong ----------------------------------------------------------------------------------------------
 
 
 @given(
@@ -147,7 +147,7 @@ def test_regions_moved_by_whole_pixels_share_what_depends_on_the_outline_alone()
     assert (moved.rows.start - first.rows.start, moved.columns.start - first.columns.start) == (20, 31)
 
 
-# --- the edge of the picture ------------------------------------------------------------------------------------------
+# --- the edge of the picture -----------------------------------------------------------------------------------------
 
 
 def test_corners_half_a_pixel_beyond_the_last_centre_are_still_inside():
@@ -175,7 +175,7 @@ def test_a_region_beyond_the_edge_is_clipped_and_says_so(corners):
     assert (inside == larger[1000:1060, 1000:1050]).all()
 
 
-# --- refusals ---------------------------------------------------------------------------------------------------------
+# --- refusals --------------------------------------------------------------------------------------------------------
 
 OUTLINES = [
     pytest.param([(0, 0), (40, 40)], "three", id="a line"),

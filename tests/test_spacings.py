@@ -30,7 +30,7 @@ vectors = st.tuples(st.floats(-0.5, 0.5), st.floats(-0.5, 0.5)).filter(lambda g:
 geometries = st.tuples(st.floats(0.005, 0.1), st.floats(0.005, 0.1), st.floats(-0.5, 0.5))
 
 
-# --- geometry ---------------------------------------------------------------------------------------------------------------
+# --- geometry --------------------------------------------------------------------------------------------------------
 
 
 @given(g=vectors, geometry=geometries)
@@ -87,7 +87,7 @@ def test_without_a_pixel_size_all_is_in_pixels():
     assert np.isnan(got.scale[0])
 
 
-# --- uncertainties ----------------------------------------------------------------------------------------------------------
+# --- uncertainties ---------------------------------------------------------------------------------------------------
 
 
 def monte_carlo(g, covariance, geometry, relative, count=40_000):
@@ -144,7 +144,7 @@ def test_the_crystal_part_is_relative_along_g_and_turns_it_by_what_is_across(g, 
     assert got.fit[0] == 0
 
 
-# --- angles -----------------------------------------------------------------------------------------------------------------
+# --- angles ----------------------------------------------------------------------------------------------------------
 
 
 def angles(g, joint, scale=None, across=0.0):

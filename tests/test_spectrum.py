@@ -2,9 +2,9 @@
 
 import numpy as np
 import pytest
-from simulated_fringes import Wave, ellipse_mask, fringes, places, prepared
 
 from fringespan.spectrum import power_spectrum, prepare_pixels, taper, trend_surface
+from simulated_fringes import Wave, ellipse_mask, fringes, places, prepared
 
 RNG = np.random.default_rng
 
@@ -14,7 +14,7 @@ def mean_density(values, mask=None):
     return float(prepared(values, mask).spectrum.power[3:-3, 3:].mean())
 
 
-# --- scale and axes -----------------------------------------------------------------------------------------------------
+# --- scale and axes --------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("shape", [(128, 128), (101, 203), (240, 96)])
@@ -71,7 +71,7 @@ def test_the_window_falls_to_the_edge_and_is_nothing_outside():
     assert window.oblique[60, 3] < 0.1
 
 
-# --- the slow trend -----------------------------------------------------------------------------------------------------
+# --- the slow trend --------------------------------------------------------------------------------------------------
 
 TRENDS = [
     pytest.param(lambda y, x: 1000 + 0 * y + 0 * x, id="constant"),
@@ -101,7 +101,7 @@ def test_a_scale_of_the_pixel_values_squares_in_the_power():
     assert many == pytest.approx(one * 1e8, rel=1e-3, abs=1e3)
 
 
-# --- the type of the pixels ---------------------------------------------------------------------------------------------
+# --- the type of the pixels ------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(
@@ -118,7 +118,7 @@ def test_half_precision_of_the_other_byte_order_has_the_same_spectrum():
     assert mean_density(counts.astype(">f2")) == pytest.approx(mean_density(counts.astype("f8")))
 
 
-# --- bad pixels ---------------------------------------------------------------------------------------------------------
+# --- bad pixels ------------------------------------------------------------------------------------------------------
 
 
 def spoilt(values, count, value, seed=0):
@@ -153,7 +153,9 @@ def test_bad_pixels_are_left_out_and_counted(dtype, count, value):
     assert np.array_equal(bad, kept, equal_nan=True)
     assert (got.pixels.defect_count, got.pixels.saturated_count) == (count, 0)
     assert got.pixels.sigma == pytest.approx(prepared(clean).pixels.sigma, rel=0.02)
-    assert got.spectrum.power[3:-3, 3:].mean() == pytest.approx(prepared(clean).spectrum.power[3:-3, 3:].mean(), rel=0.05)
+    assert got.spectrum.power[3:-3, 3:].mean() == pytest.approx(
+        prepared(clean).spectrum.power[3:-3, 3:].mean(), rel=0.05
+    )
     assert got.spectrum.power.argmax() == prepared(clean).spectrum.power.argmax()
 
 

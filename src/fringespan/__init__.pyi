@@ -11,7 +11,17 @@ from .crystal.phase import Phase as Phase
 from .crystal.reflections import expected_reflections as expected_reflections
 from .crystal.zone import zone_pattern as zone_pattern
 from .exceptions import FringespanError as FringespanError
+from .focal_series import FocalSeries as FocalSeries
+from .focal_series import combine_focal_series as combine_focal_series
+from .focal_series import focal_series_gain as focal_series_gain
+from .focal_series import series_forecast as series_forecast
+from .judgement import FocusAdvice as FocusAdvice
+from .judgement import focus_advice as focus_advice
 from .lattice import PlaneLattice as PlaneLattice
+from .magnification.check import MagnificationCheck as MagnificationCheck
+from .magnification.check import check_magnification as check_magnification
+from .magnification.internal_standard import calibrate_within_picture as calibrate_within_picture
+from .magnification.reference import ReferenceSpacing as ReferenceSpacing
 from .measurement import Measurement as Measurement
 from .measurement import measure as measure
 from .micrograph import Micrograph as Micrograph

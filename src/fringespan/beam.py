@@ -55,7 +55,6 @@ _CS_LIMIT_MM = 50.0
 _DEFOCUS_LIMIT_NM = 1e5
 _MOST_ZEROS = 10_000_000
 _SPACINGS_NM = (0.5, 0.4, 0.35, 0.3, 0.25, 0.2, 0.175, 0.15, 0.125, 0.1, 0.08)
-_LOWEST_ENVELOPE = math.exp(-2)
 
 
 def _number(value: float, name: str, low: float, high: float, advice: str) -> float:

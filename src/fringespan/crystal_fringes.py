@@ -18,7 +18,7 @@ from fringespan.finite_crystal import (
     smoothing_width_px,
     why_broken,
 )
-from fringespan.lattice import LatticeFit, find_lattice, lattice_points
+from fringespan.lattice import LatticeFit, find_lattice, unseen_lattice_points
 from fringespan.noise import RingBackground, ring_background, rings_at
 from fringespan.peaks.demodulation import demodulate
 from fringespan.peaks.detection import density_at, matched_ratio_at, tapered_maximum, waves_removed
@@ -44,6 +44,9 @@ _READABLE = 150.0
 _RUNAWAY_BINS = 0.4
 """A misfitting wave further than this from the tapered spectrum's maximum has run to one side."""
 
+_DIRECTIONS = np.stack([np.sin(np.arange(36) * np.pi / 36), np.cos(np.arange(36) * np.pi / 36)])
+"""Unit vectors in which widths are measured, shape (2, 36)."""
+
 _STRAY = 0.02
 """Peaks off the lattice of an uneven crystal that have less than this share of the strongest power are strays."""
 
@@ -66,6 +69,8 @@ class CrystalFringes:
         Half the real amplitude, with the phase at `phase_origin`.
     phase_origin : (float, float)
         (row, column) from the first pixel of the region's rectangle.
+    mean_level : float
+        Mean pixel value inside the crystal.
     misfit : ndarray, shape (n,)
         See `fringespan.peaks.misfit`.
     crystal_along, crystal_across : ndarray, shape (n,)
@@ -100,6 +105,7 @@ class CrystalFringes:
     density: NDArray[np.float64]
     amplitude: NDArray[np.complex128]
     phase_origin: tuple[float, float]
+    mean_level: float
     misfit: NDArray[np.float64]
     crystal_along: NDArray[np.float64]
     crystal_across: NDArray[np.float64]
@@ -162,9 +168,10 @@ def find_crystal_fringes(
     clear = whole.fringes.fit.power_ratio > _CLEAR
     uneven = bool((clear & (whole.fringes.residuals.misfit > MISFIT_LIMIT)).any())
     if uneven:
-        fields, mask = _crystal(whole, clear)
-        share = float(mask.sum() / fields.inside.sum())
-        if share < _FILLED:
+        fields, strength = _strongest_fields(whole, clear)
+        mask = crystal_mask(fields, strength, 0.35)
+        share = float(crystal_mask(fields, strength).sum() / fields.inside.sum())
+        if mask.sum() / fields.inside.sum() < _FILLED:
             footprint, corner = crystal_footprint(whole.footprint, fields, mask)
             if min(footprint.shape) >= 24 and footprint.count > 400:
                 scene = _part(whole, footprint, corner, settings, aspect)
@@ -206,13 +213,13 @@ def _part(
     return _scene(pixels, spectrum, settings, aspect, corner)
 
 
-def _crystal(scene: _Scene, used: NDArray[np.bool_]) -> tuple[FringeField, NDArray[np.bool_]]:
-    """Return the fields of the strongest fringes and the cells that they fill together."""
+def _strongest_fields(scene: _Scene, used: NDArray[np.bool_]) -> tuple[FringeField, NDArray[np.float64]]:
+    """Return the fields of the strongest fringes and their signal to noise."""
     fit = scene.fringes.fit
     strongest = np.flatnonzero(used)[np.argsort(-fit.power_ratio[used])][:8]
     width = smoothing_width_px(scene.footprint.count, fit.power_ratio, fit.frequency)[strongest]
     fields = fringe_fields(scene.footprint, fit.demodulation.part(strongest), fit.frequency[strongest], width)
-    return fields, crystal_mask(fields, np.sqrt(fit.power_ratio[strongest]), 0.35)
+    return fields, np.sqrt(fit.power_ratio[strongest])
 
 
 def _missing(whole: _Scene, part: _Scene) -> NDArray[np.float64]:
@@ -291,15 +298,11 @@ def _with_lattice_points(
 ) -> _Scene:
     """Look at the lattice points that show no peak yet, at the lower threshold that a known position allows."""
     fringes, footprint = scene.fringes, scene.footprint
-    bins = np.array(footprint.shape)
+    bins = np.array(footprint.shape, dtype=float)
     basis = lattice.basis * size
-    finest = 1.2 * np.hypot(*(lattice.index[lattice.member] @ basis).T).max()
-    point = lattice_points(basis, min(finest, 0.7)) @ basis
-    point = point[np.abs(point).max(axis=1) < 0.48]
-    taken = np.concatenate([fringes.fit.frequency, -fringes.fit.frequency])
-    apart = np.hypot(*((point[:, None] - taken[None]) * bins).transpose(2, 0, 1)).min(axis=1)
-    near = np.hypot(*(point * bins).T)
-    point = point[(apart > 4) & (near > settings.smallest_distance_bins)]
+    on_lattice = lattice.index[lattice.member] @ basis
+    finest = 1.2 * float(np.sqrt((on_lattice * on_lattice).sum(axis=1).max()))
+    point = unseen_lattice_points(basis, min(finest, 0.7), fringes.fit.frequency, bins, settings.smallest_distance_bins)
     if not len(point) or len(point) > 2000:
         return scene
     threshold = float(np.log(len(point) / settings.false_peaks_per_region)) + 1.0
@@ -373,7 +376,7 @@ def _assembled(
         scene = _centred(scene)
     fit, misfit = scene.fringes.fit, scene.fringes.residuals.misfit
     n = len(fit.power_ratio)
-    frequency, covariance = fit.frequency.copy(), fit.covariance.copy()
+    frequency, covariance, amplitude = fit.frequency.copy(), fit.covariance.copy(), fit.amplitude.copy()
     ny, nx = scene.footprint.shape
     withheld: list[str | None] = [None] * n
     crystal: CrystalFit | None = None
@@ -385,6 +388,7 @@ def _assembled(
         own = (misfit > MISFIT_LIMIT) | (fit.power_ratio > _READABLE)
         own &= (crystal.share < 0.95) | (crystal.phase_rms > 0.1) | (crystal.plateau_loss > 0.1)
         frequency[own] += (crystal.shift * size)[own]
+        amplitude[own] = crystal.amplitude[own]
         for k in np.flatnonzero(own):
             covariance[2 * k : 2 * k + 2] *= crystal.efficiency[k]
             covariance[:, 2 * k : 2 * k + 2] *= crystal.efficiency[k]
@@ -402,7 +406,7 @@ def _assembled(
     )
     order = np.argsort(-fit.power_ratio)
     middle = scene.corner[0] + (ny - 1) / 2, scene.corner[1] + (nx - 1) / 2
-    drawn, extent = _outline(scene, fields, middle, size)
+    drawn, extent, mean_level = _outline(scene, fields, middle, size)
     pairs = np.stack([2 * order, 2 * order + 1], axis=1).ravel()
     second = _second_lattice(moved, lattice, size)
     return CrystalFringes(
@@ -410,8 +414,9 @@ def _assembled(
         covariance=covariance[np.ix_(pairs, pairs)],
         power_ratio=fit.power_ratio[order],
         density=scene.fringes.density[order],
-        amplitude=fit.amplitude[order],
+        amplitude=amplitude[order],
         phase_origin=middle,
+        mean_level=mean_level,
         misfit=misfit[order],
         crystal_along=along[order],
         crystal_across=across[order],
@@ -485,44 +490,40 @@ def _uncertainties(
         scatter = 0.0
         if residual is not None and member.sum() >= 3:
             scatter = lattice_scatter(residual[member], (noise * length)[member], np.full(int(member.sum()), 0.002))
-        along = np.minimum(np.full(n, 1.5 * scatter), np.maximum(2 * noise * length, 1.5 * scatter))
+        along = np.minimum(1.5 * scatter, 2 * noise * length)
         across, floor = 0.25 * along, 0.0
     # direction of g in pixels differs from that in nm by the pixel's aspect only, which these rough terms can ignore
-    scale = np.hypot(*(fit.frequency).T) / np.hypot(*g.T)
+    norm = np.sqrt((g * g).sum(axis=1))
+    scale = np.sqrt((fit.frequency * fit.frequency).sum(axis=1)) / norm
     lattice_along, relative = np.zeros(n), 0.0
     if lattice is not None:
-        unit = g / np.hypot(*g.T)[:, None]
+        unit = g / norm[:, None]
         jacobian = np.concatenate([lattice.index[:, :1] * unit, lattice.index[:, 1:] * unit], axis=1)
-        formal = np.sqrt(((jacobian @ lattice.covariance) * jacobian).sum(axis=1))
-        kappa = floor if crystal is not None else 0.0
-        lattice_along = np.hypot(0.9 * formal, kappa / length) * scale
-        relative = float(np.median(kappa / length / np.hypot(*g.T)))
+        formal = 0.9 * np.sqrt(((jacobian @ lattice.covariance) * jacobian).sum(axis=1))
+        lattice_along = formal * scale
+        if crystal is not None:
+            lattice_along = np.hypot(formal, floor / length) * scale
+            relative = float(np.median(floor / length / norm))
     return along / length * scale, across / length * scale, lattice_along, relative
 
 
 def _region_extent(footprint: Footprint, g: NDArray[np.float64], size: NDArray[np.float64]) -> NDArray[np.float64]:
     """Return sqrt(12 var) of a footprint's pixels along each g, in nm (or pixels)."""
-    row, start, stop = (footprint.spans[:, i].astype(float) for i in range(3))
-    count = stop - start
-    middle = (start + stop - 1) / 2
-    total = count.sum()
-    y, x = (count * row).sum() / total, (count * middle).sum() / total
-    yy = (count * (row - y) ** 2).sum() / total
-    xx = (count * ((middle - x) ** 2 + (count**2 - 1) / 12)).sum() / total
-    yx = (count * (row - y) * (middle - x)).sum() / total
-    unit = g / np.hypot(*g.T)[:, None] * size
-    return np.asarray(np.sqrt(12 * (unit[:, 0] ** 2 * yy + unit[:, 1] ** 2 * xx + 2 * unit[:, 0] * unit[:, 1] * yx)))
+    yy, yx, xx = footprint.second_moments
+    scaled = g * size
+    y, x = scaled[:, 0], scaled[:, 1]
+    return np.asarray(np.sqrt(12 * (y * y * yy + x * x * xx + 2 * y * x * yx) / (g * g).sum(axis=1)))
 
 
 def _reordered(lattice: LatticeFit | None, order: NDArray[np.intp], size: NDArray[np.float64]) -> LatticeFit | None:
     """Return a lattice with its peaks in another order and its lengths in cycles per pixel."""
     if lattice is None:
         return None
-    scale = np.diag(np.tile(size, 2))
+    scale = np.concatenate([size, size])
     return replace(
         lattice,
         basis=lattice.basis * size,
-        covariance=scale @ lattice.covariance @ scale,
+        covariance=lattice.covariance * (scale[:, None] * scale),
         index=lattice.index[order],
         member=lattice.member[order],
         along=lattice.along[order],
@@ -555,20 +556,26 @@ def _second_lattice(scene: _Scene, first: LatticeFit | None, size: NDArray[np.fl
 
 def _outline(
     scene: _Scene, fields: FringeField | None, middle: tuple[float, float], size: NDArray[np.float64]
-) -> tuple[NDArray[np.float64] | None, tuple[float, float] | None]:
-    """Return the crystal's outline from the region's first pixel, and its greatest and smallest width."""
+) -> tuple[NDArray[np.float64] | None, tuple[float, float] | None, float]:
+    """Return the crystal's outline from the region's first pixel, its greatest and smallest width, and its mean pixel."""
     power_ratio = scene.fringes.fit.power_ratio
+    trend = scene.pixels.trend
+    mean = float(trend[0] + (trend[2] + trend[7]) / 3)
     if not len(power_ratio):
-        return None, None
+        return None, None, mean
     if fields is None:
         corners = _corners(scene.footprint) + scene.corner
     else:
         used = power_ratio > min(_CLEAR, power_ratio.max() * 0.99)
         part = replace(fields, field=fields.field[used], width_px=fields.width_px[used])
-        corners = outline(part, crystal_mask(part, np.sqrt(power_ratio[used]))) + middle
-    angle = np.linspace(0, np.pi, 36, endpoint=False)
-    widths = np.ptp((corners * size) @ np.stack([np.sin(angle), np.cos(angle)]), axis=0)
-    return corners, (float(widths.max()), float(widths.min()))
+        mask = crystal_mask(part, np.sqrt(power_ratio[used]))
+        corners = outline(part, mask) + middle
+        filled, (top, left) = crystal_footprint(scene.footprint, part, mask)
+        values = scene.pixels.values[top : top + filled.shape[0], left : left + filled.shape[1]]
+        mean = float(values[filled.mask].mean(dtype=np.float64))
+    along = (corners * size) @ _DIRECTIONS
+    widths = along.max(axis=0) - along.min(axis=0)
+    return corners, (float(widths.max()), float(widths.min())), mean
 
 
 def _corners(footprint: Footprint) -> NDArray[np.float64]:

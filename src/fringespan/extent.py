@@ -256,10 +256,17 @@ def crystal_footprint(
     inside = _interpolated(lines.T, column).T > 0.5
     if footprint.mask is not None:
         inside &= footprint.mask
+    if not inside.any():
+        # a crystal of a single cell is smoothed away: the cell's own pixels stand for it
+        inside = (_interpolated(_interpolated(mask.astype(float), row).T, column).T > 0) & _inside_of(footprint)
     rows, columns = np.flatnonzero(inside.any(axis=1)), np.flatnonzero(inside.any(axis=0))
     top, left = int(rows[0]), int(columns[0])
     cut = np.ascontiguousarray(inside[top : rows[-1] + 1, left : columns[-1] + 1])
     return Footprint.from_mask(cut), (top, left)
+
+
+def _inside_of(footprint: Footprint) -> NDArray[np.bool_]:
+    return np.ones(footprint.shape, bool) if footprint.mask is None else footprint.mask
 
 
 def _interpolated(values: NDArray[np.float64], position: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -33,6 +33,9 @@ __all__ = [
 
 _TAPER_REACH = 0.9
 
+_BROKEN_PHASE, _BROKEN_SHARE, _BROKEN_SPREAD = 0.5, 0.15, 0.25
+"""Phase departure in rad, share of the region, and spread in cycles beyond which fringes are broken."""
+
 _BENT_PHASE = 0.2
 """Phase departure in rad, RMS, from which the halves of a crystal are compared."""
 
@@ -43,6 +46,8 @@ class CrystalFit:
 
     Attributes
     ----------
+    amplitude : ndarray of complex128, shape (n,)
+        Mean complex amplitude inside the crystal after the shift, half the real one.
     shift : ndarray, shape (n, 2)
         Change of the frequency against the one the field was taken at, cycles per pixel (row, column).
     length : ndarray, shape (n,)
@@ -66,6 +71,7 @@ class CrystalFit:
         Standard deviation of this fit along g over that of a plane wave filling the whole region, by the noise alone.
     """
 
+    amplitude: NDArray[np.complex128]
     shift: NDArray[np.float64]
     length: NDArray[np.float64]
     width: NDArray[np.float64]
@@ -193,8 +199,8 @@ def _extent_along(mask, y, x, ny, nx):  # type: ignore[no-untyped-def]
 
 
 @numba.njit(cache=True, nogil=True)
-def _features(field, amplitude, weight, mask, y, x, shift):  # type: ignore[no-untyped-def]
-    """Return the weighted RMS phase about the fitted wave in the mask, and the amplitude's centre in units of its spread."""
+def _phase_rms(field, amplitude, weight, mask, y, x, shift):  # type: ignore[no-untyped-def]
+    """Return the weighted RMS phase about the fitted wave in the mask."""
     mean = 0j
     for i in range(y.size):
         for j in range(x.size):
@@ -269,7 +275,7 @@ def fit_crystal(
     n = len(frequency)
     y, x = fields.y, fields.x
     cell = (y[1] - y[0], x[1] - x[0])
-    shift = np.zeros((n, 2))
+    shift, inner = np.zeros((n, 2)), np.zeros(n, np.complex128)
     length, width, phase, plateau = np.zeros(n), np.zeros(n), np.zeros(n), np.zeros(n)
     spread, share, efficiency = np.zeros(n), np.zeros(n), np.ones(n)
     one_sided, bend = np.zeros(n, bool), np.zeros((n, 2, 2))
@@ -291,7 +297,9 @@ def fit_crystal(
             amplitude, fields.inside
         )
         noise /= max(amplitude[mask].mean(), 1e-30)
-        phase[k] = np.sqrt(max(_features(field, amplitude, weight, mask, y, x, shift[k]) ** 2 - noise**2, 0.0))
+        phase[k] = np.sqrt(max(_phase_rms(field, amplitude, weight, mask, y, x, shift[k]) ** 2 - noise**2, 0.0))
+        turn = np.exp(-2j * np.pi * (shift[k, 0] * grid_y + shift[k, 1] * grid_x))
+        inner[k] = (field * turn)[mask].mean()
         top = filled_part(amplitude, mask, 0.7)
         plateau[k] = max(0.0, 1 - (_extent_along(top, y, x, *unit) / max(length[k], 1e-9)) ** 2)
         one_sided[k] = _lopsided(amplitude, mask, y, x) > 0.5
@@ -313,7 +321,7 @@ def fit_crystal(
         noise_share = np.sqrt((weight**2 * line**2).sum())
         whole = np.sqrt((fields.inside * _along(fields.inside.astype(float), grid_y, grid_x, unit) ** 2).sum())
         efficiency[k] = noise_share / max(mean, 1e-30) * whole * _level(amplitude, fields.inside)
-    return CrystalFit(shift, length, width, phase, plateau, one_sided, spread, share, bend, efficiency)
+    return CrystalFit(inner, shift, length, width, phase, plateau, one_sided, spread, share, bend, efficiency)
 
 
 def _bend(
@@ -369,9 +377,6 @@ def why_broken(crystal: CrystalFit) -> list[str | None]:
         else:
             reasons.append(None)
     return reasons
-
-
-_BROKEN_PHASE, _BROKEN_SHARE, _BROKEN_SPREAD = 0.5, 0.15, 0.25
 
 
 @dataclass(frozen=True, eq=False, slots=True)

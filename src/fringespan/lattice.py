@@ -2,13 +2,22 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numba
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["LatticeFit", "PlaneLattice", "combinations", "find_lattice", "lattice_points", "plane_lattice"]
+__all__ = [
+    "LatticeFit",
+    "PlaneLattice",
+    "combinations",
+    "find_lattice",
+    "lattice_points",
+    "plane_lattice",
+    "unseen_lattice_points",
+]
 
 _STRONGEST = 8
 _HIGHEST_INDEX = 12
@@ -110,20 +119,32 @@ def find_lattice(
     """
     if len(g) < 3:
         return None
+    index, member, along = np.empty((len(g), 2), np.int64), np.empty(len(g), np.bool_), np.empty(len(g))
     order = np.argsort(-strength)[:_STRONGEST]
-    vectors = _with_differences(g[order], min(5, len(order)))
-    unit = g / np.sqrt((g * g).sum(axis=1))[:, None]
+    is_found, basis, covariance, scatter = _find(g, sigma_along, sigma_across, order, index, member, along)
+    return LatticeFit(basis, covariance, index, member, along, scatter) if is_found else None
+
+
+@numba.njit(cache=True, nogil=True)
+def _find(g, sigma_along, sigma_across, order, index, member, along):  # type: ignore[no-untyped-def]
+    """Fill in the nearest points, who lies on the lattice, and residuals; return success, basis, covariance, scatter."""
+    unit = np.empty_like(g)
+    for k in range(g.shape[0]):
+        unit[k] = g[k] / np.sqrt(g[k, 0] ** 2 + g[k, 1] ** 2)
+    vectors = _with_differences(g[order], min(5, order.size))
     evidence, basis = _best_basis(vectors, g, unit, sigma_along, sigma_across)
     if evidence < _LEAST_EVIDENCE:
-        return None
+        return False, basis, np.zeros((4, 4)), 1.0
     basis = _reduced(basis)
-    index, member = np.empty((len(g), 2), np.int64), np.empty(len(g), np.bool_)
     _score(basis, g, unit, sigma_along, sigma_across, index, member)
     if member.sum() < 3 or not _spans_plane(index, member):
-        return None
+        return False, basis, np.zeros((4, 4)), 1.0
     basis, normal, scatter = _weighted_fit(g, unit, sigma_along, sigma_across, index, member)
-    along = np.asarray(((g - index @ basis) * unit).sum(axis=1), dtype=float)
-    return LatticeFit(basis, np.linalg.inv(normal) * scatter**2, index, member, along, float(scatter))
+    for k in range(g.shape[0]):
+        along[k] = 0.0
+        for a in range(2):
+            along[k] += (g[k, a] - index[k, 0] * basis[0, a] - index[k, 1] * basis[1, a]) * unit[k, a]
+    return True, basis, np.linalg.inv(normal) * scatter**2, scatter
 
 
 @numba.njit(cache=True, nogil=True)
@@ -155,7 +176,7 @@ def _best_basis(vectors, g, unit, sigma_along, sigma_across):  # type: ignore[no
             basis[0] = vectors[i]
             basis[1] = vectors[j]
             area = abs(basis[0, 0] * basis[1, 1] - basis[0, 1] * basis[1, 0])
-            if area**2 < 0.0225 * (basis[0] ** 2).sum() * (basis[1] ** 2).sum():
+            if area**2 <= 0.0225 * (basis[0] ** 2).sum() * (basis[1] ** 2).sum():
                 continue
             reduced = _reduced(basis)
             seen = False
@@ -325,6 +346,46 @@ def _points(basis, longest):  # type: ignore[no-untyped-def]
     return out[:found]
 
 
+def unseen_lattice_points(
+    basis: NDArray[np.float64], longest: float, seen: NDArray[np.float64], bins: NDArray[np.float64], nearest: float
+) -> NDArray[np.float64]:
+    """Return the lattice points up to a length that may hold a peak that was not seen yet, shape (n, 2).
+
+    Parameters
+    ----------
+    basis : ndarray, shape (2, 2)
+        Cycles per pixel.
+    longest : float
+        Cycles per pixel; points beyond 0.48 along an axis are left out.
+    seen : ndarray, shape (m, 2)
+        Peaks; points less than four bins from one or its opposite are left out.
+    bins : ndarray, shape (2,)
+        Bins per cycle per pixel along (row, column).
+    nearest : float
+        Points nearer to the origin, in bins, are left out.
+    """
+    return np.asarray(_unseen(basis, longest, seen, bins, nearest))
+
+
+@numba.njit(cache=True, nogil=True)
+def _unseen(basis, longest, seen, bins, nearest):  # type: ignore[no-untyped-def]
+    points = _points(basis, longest)
+    out = np.empty((points.shape[0], 2))
+    found = 0
+    for k in range(points.shape[0]):
+        y = points[k, 0] * basis[0, 0] + points[k, 1] * basis[1, 0]
+        x = points[k, 0] * basis[0, 1] + points[k, 1] * basis[1, 1]
+        apart = abs(y) < 0.48 and abs(x) < 0.48 and np.hypot(y * bins[0], x * bins[1]) > nearest
+        for m in range(seen.shape[0]):
+            for sign in (-1, 1):
+                if np.hypot((y + sign * seen[m, 0]) * bins[0], (x + sign * seen[m, 1]) * bins[1]) <= 4:
+                    apart = False
+        if apart:
+            out[found, 0], out[found, 1] = y, x
+            found += 1
+    return out[:found]
+
+
 def combinations(
     index: NDArray[np.int64], member: NDArray[np.bool_], strength: NDArray[np.float64]
 ) -> list[tuple[int, ...] | None]:
@@ -376,32 +437,33 @@ def plane_lattice(
     geometry : ndarray, shape (2, 2), or None
         nm per pixel, as `Micrograph.geometry_nm_per_px`.
     """
-    px = fit.basis
-    sigma_px = np.hypot(np.sqrt(np.diag(fit.covariance)).reshape(2, 2), crystal_relative * np.abs(px))
+    px, relative = fit.basis, crystal_relative
+    sigma_px = _widened(px, fit.covariance, relative)
     if geometry is None:
         nm, sigma_nm, real_nm, lengths, length_sigma = None, None, None, None, None
         flat, covariance = px.ravel(), fit.covariance
     else:
-        transform = np.linalg.inv(geometry)
-        both = np.zeros((4, 4))
-        both[:2, :2] = both[2:, 2:] = transform.T
+        transform = _inverse(geometry)
         nm = px @ transform
-        flat, covariance = nm.ravel(), both @ fit.covariance @ both.T
-        sigma_nm = np.hypot(np.sqrt(np.diag(covariance)).reshape(2, 2), crystal_relative * np.abs(nm))
-        real_nm = np.linalg.inv(nm).T
+        flat = nm.ravel()
+        # each basis vector is turned alike: the blocks of the covariance are
+        blocks = fit.covariance.reshape(2, 2, 2, 2)
+        covariance = np.einsum("ak,iajb,bl->ikjl", transform, blocks, transform).reshape(4, 4)
+        sigma_nm = _widened(nm, covariance, relative)
+        real_nm = _inverse(nm).T
     values, sigma = _real_space(flat, covariance)
     if geometry is not None:
         lengths = float(values[0]), float(values[1])
         length_sigma = (
-            float(np.hypot(sigma[0], crystal_relative * values[0])),
-            float(np.hypot(sigma[1], crystal_relative * values[1])),
+            math.hypot(sigma[0], relative * values[0]),
+            math.hypot(sigma[1], relative * values[1]),
         )
     return PlaneLattice(
         reciprocal_per_px=px,
         reciprocal_uncertainty_per_px=sigma_px,
         reciprocal_per_nm=nm,
         reciprocal_uncertainty_per_nm=sigma_nm,
-        real_px=np.asarray(np.linalg.inv(px).T, dtype=float),
+        real_px=_inverse(px).T,
         real_nm=real_nm,
         lengths_nm=lengths,
         length_uncertainties_nm=length_sigma,
@@ -412,22 +474,44 @@ def plane_lattice(
     )
 
 
-def _real_space(
-    flat: NDArray[np.float64], covariance: NDArray[np.float64]
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def _widened(basis: NDArray[np.float64], covariance: NDArray[np.float64], relative: float) -> NDArray[np.float64]:
+    """Return the standard uncertainty of each component, with a relative part."""
+    return np.asarray(np.sqrt(covariance.diagonal().reshape(2, 2) + (relative * basis) ** 2))
+
+
+def _inverse(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the inverse of a 2 x 2 matrix."""
+    (a, b), (c, d) = matrix.tolist()
+    return np.asarray(np.array([[d, -b], [-c, a]]) / (a * d - b * c), dtype=float)
+
+
+@numba.njit(cache=True, nogil=True)
+def _real_space(flat, covariance):  # type: ignore[no-untyped-def]
     """Return both lengths and the angle of the real-space basis, and their standard uncertainties by differences."""
     step = 1e-6 * np.abs(flat).max()
-    b = (flat + step * np.concatenate([np.zeros((1, 4)), np.eye(4), -np.eye(4)])).reshape(9, 2, 2)
-    determinant = b[:, 0, 0] * b[:, 1, 1] - b[:, 0, 1] * b[:, 1, 0]
-    squares = (b * b).sum(axis=2)
-    product = (b[:, 0] * b[:, 1]).sum(axis=1)
+    values = np.empty(3)
+    slope = np.empty((3, 4))
+    beside = np.empty((2, 3))
+    for k in range(4):
+        for side in range(2):
+            b = flat.copy()
+            b[k] += step if side == 0 else -step
+            _lengths_and_angle(b, beside[side])
+        slope[:, k] = (beside[0] - beside[1]) / (2 * step)
+    _lengths_and_angle(flat, values)
+    sigma = np.zeros(3)
+    for i in range(3):
+        for k in range(4):
+            for m in range(4):
+                sigma[i] += slope[i, k] * covariance[k, m] * slope[i, m]
+        sigma[i] = np.sqrt(max(sigma[i], 0.0))
+    return values, sigma
+
+
+@numba.njit(cache=True, nogil=True)
+def _lengths_and_angle(b, out):  # type: ignore[no-untyped-def]
+    determinant = abs(b[0] * b[3] - b[1] * b[2])
     # a1 is perpendicular to b2, so |a1| = |b2| / |det|; the angle between a1 and a2 is the supplement of that of b1, b2
-    values = np.stack(
-        [
-            np.sqrt(squares[:, 1]) / np.abs(determinant),
-            np.sqrt(squares[:, 0]) / np.abs(determinant),
-            np.degrees(np.arctan2(np.abs(determinant), -product)),
-        ]
-    )
-    slope = (values[:, 1:5] - values[:, 5:]) / (2 * step)
-    return values[:, 0], np.sqrt(np.maximum(((slope @ covariance) * slope).sum(axis=1), 0.0))
+    out[0] = np.sqrt(b[2] ** 2 + b[3] ** 2) / determinant
+    out[1] = np.sqrt(b[0] ** 2 + b[1] ** 2) / determinant
+    out[2] = np.degrees(np.arctan2(determinant, -(b[0] * b[2] + b[1] * b[3])))

@@ -248,9 +248,9 @@ def _peaks(
     angles = pair_angles(spacings, found.covariance, scale, found.crystal_across)
     in_nm = scale.geometry is not None
     origin = placed.rows.start + found.phase_origin[0], placed.columns.start + found.phase_origin[1]
-    amplitude = np.abs(found.amplitude)
+    amplitude = np.abs(found.amplitude) * pixels.unit
     phase = np.where(spacings.flipped, -1, 1) * np.angle(found.amplitude)
-    mean = float(pixels.trend[0] + (pixels.trend[2] + pixels.trend[7]) / 3)
+    mean = pixels.unit * found.mean_level
     visible = micrograph.dark_level is not None and mean > micrograph.dark_level
     theta = None
     if in_nm and micrograph.voltage_kv is not None:

@@ -136,6 +136,16 @@ class Footprint:
         """Number of pixels that belong."""
         return int((self.spans[:, 2] - self.spans[:, 1]).sum())
 
+    @cached_property
+    def second_moments(self) -> tuple[float, float, float]:
+        """Mean of y y, y x and x x over the pixels, from their middle."""
+        row, start, stop = (self.spans[:, i].astype(float) for i in range(3))
+        count, middle = stop - start, (start + stop - 1) / 2
+        total = count.sum()
+        y, x = row - (count * row).sum() / total, middle - (count * middle).sum() / total
+        within = (count**2 - 1) / 12
+        return tuple(float((count * m).sum() / total) for m in (y * y, y * x, x * x + within))  # type: ignore[return-value]
+
     @classmethod
     def from_mask(cls, mask: NDArray[np.bool_]) -> Footprint:
         """Return the footprint of a mask."""

@@ -77,6 +77,8 @@ class RegionPixels:
         Slow trend, a cubic polynomial that is subtracted wherever the pixels are used (`trend_row`).
     sigma : float
         Standard deviation about the trend.
+    unit : float
+        What the values are in units of: 1, except where they were so large or small that squares would not do.
     defect_count, saturated_count : int
         Pixels left out because they are not finite or stand far off; because they are at the end of the range.
     """
@@ -85,6 +87,7 @@ class RegionPixels:
     footprint: Footprint
     trend: NDArray[np.float64]
     sigma: float
+    unit: float
     defect_count: int
     saturated_count: int
 
@@ -366,8 +369,23 @@ def prepare_pixels(values: NDArray[np.generic], footprint: Footprint) -> RegionP
         values = values.astype(np.float32 if kind.itemsize == 2 else np.float64)
     elif not kind.isnative:
         values = values.astype(kind.newbyteorder("="))
+    unit = _unit(values) if kind.kind == "f" else 1.0
+    if unit != 1.0:
+        values = (values.astype(np.float64) / unit).astype(np.float32)
     trend, sigma = _trend(values, _trend_spans(footprint))
-    return RegionPixels(values, footprint, trend, sigma, 0, 0)
+    return RegionPixels(values, footprint, trend, sigma, unit, 0, 0)
+
+
+def _unit(values: NDArray[np.generic]) -> float:
+    """Return 1, or the spread of the values where squares of them would leave single precision."""
+    step = [max(1, n // 32) for n in values.shape]
+    sample = values[:: step[0], :: step[1]].astype(np.float64)
+    sample = sample[np.isfinite(sample)]
+    if not sample.size:
+        return 1.0
+    # the median, so that a few defects do not set the scale
+    spread = float(np.median(np.abs(sample - np.median(sample))))
+    return 1.0 if spread == 0 or 1e-8 < spread < 1e8 else spread
 
 
 def _trend(values: NDArray[np.generic], spans: NDArray[np.int32]) -> tuple[NDArray[np.float64], float]:
@@ -408,11 +426,12 @@ def without_defects(pixels: RegionPixels) -> RegionPixels:
         good &= ~far
     if not good.any():
         return RegionPixels(
-            np.zeros_like(values), footprint, np.zeros(10), 0.0, int(inside.sum()), int(saturated.sum())
+            np.zeros_like(values), footprint, np.zeros(10), 0.0, pixels.unit, int(inside.sum()), int(saturated.sum())
         )
     bad = inside & ~good
     filled = np.where(good, values, trend_surface(trend, footprint.shape)).astype(np.float32)
-    return RegionPixels(filled, footprint, trend, sigma, int(bad.sum() - saturated.sum()), int(saturated.sum()))
+    defects = int(bad.sum() - saturated.sum())
+    return RegionPixels(filled, footprint, trend, sigma, pixels.unit, defects, int(saturated.sum()))
 
 
 def _saturation_level(values: NDArray[np.generic], good: NDArray[np.bool_]) -> float | None:
@@ -539,7 +558,8 @@ def power_spectrum(pixels: RegionPixels) -> tuple[PowerSpectrum, RegionPixels]:
     arguments = window.rows, window.columns, oblique, padded
     low, high = _tapered(pixels.values, pixels.footprint.spans, pixels.trend, *arguments)
     transform = scipy.fft.rfft2(padded, workers=1)
-    if not (np.isfinite(transform[0, 0]) and _within_range(pixels, float(low), float(high))):
+    sound = np.isfinite(transform[0, 0]) and _within_range(pixels, float(low), float(high))
+    if not sound or _ends_at_one_value(pixels.values):
         pixels = without_defects(pixels)
         _tapered(pixels.values, pixels.footprint.spans, pixels.trend, *arguments)
         transform = scipy.fft.rfft2(padded, workers=1)
@@ -548,6 +568,17 @@ def power_spectrum(pixels: RegionPixels) -> tuple[PowerSpectrum, RegionPixels]:
     block_maxima = np.empty((-(-shape[0] // 8), -(-shape[1] // 8)), np.float32)
     _power(transform, np.float32(1 / window.power), power, block_maxima)
     return PowerSpectrum(power, transform, window.transform_shape, block_maxima), pixels
+
+
+def _ends_at_one_value(values: NDArray[np.generic]) -> bool:
+    """Say whether several of some thousand pixels share the highest value, far above the middle of them all."""
+    step = [max(1, n // 64) for n in values.shape]
+    sample = values[:: step[0], :: step[1]]
+    top = sample.max()
+    if np.count_nonzero(sample == top) < 6:
+        return False
+    # few grey levels, as in counts of single electrons, share every value
+    return bool(np.unique(sample).size > 256)
 
 
 def _within_range(pixels: RegionPixels, low: float, high: float) -> bool:

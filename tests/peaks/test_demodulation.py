@@ -2,10 +2,10 @@
 
 import numpy as np
 import pytest
-from simulated_fringes import ellipse_mask, places, prepared
 
 from fringespan.peaks.demodulation import block_size, demodulate
 from fringespan.spectrum import trend_surface
+from simulated_fringes import ellipse_mask, places, prepared
 
 FREQUENCIES = np.array([(0.11, 0.23), (-0.31, 0.07), (0.02, 0.44), (-0.09, 0.0)])
 

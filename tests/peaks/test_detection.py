@@ -7,6 +7,14 @@ import pytest
 import scipy.ndimage
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
+from fringespan.peaks.detection import (
+    density_at,
+    detection_threshold,
+    find_candidates,
+    matched_ratio_at,
+    waves_removed,
+)
 from simulated_fringes import (
     Wave,
     blurred,
@@ -19,14 +27,6 @@ from simulated_fringes import (
     steeply_falling,
     transfer_rings,
     white,
-)
-
-from fringespan.peaks.detection import (
-    density_at,
-    detection_threshold,
-    find_candidates,
-    matched_ratio_at,
-    waves_removed,
 )
 
 SHAPE = (128, 128)
@@ -46,7 +46,7 @@ def away(frequency, g, shape):
     return np.minimum(np.hypot(*((frequency - g) * bins).T), np.hypot(*((frequency + g) * bins).T))
 
 
-# --- the threshold ----------------------------------------------------------------------------------------------------
+# --- the threshold ---------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("rate", [0.3, 2.0 / 3])
@@ -75,7 +75,7 @@ def test_the_threshold_solves_the_expected_number_of_maxima(pixels, rate):
     assert t > 3
 
 
-# --- candidates -------------------------------------------------------------------------------------------------------
+# --- candidates ------------------------------------------------------------------------------------------------------
 
 PICTURES = [
     pytest.param((128, 128), False, id="square"),
@@ -105,7 +105,9 @@ def test_a_clear_fringe_is_one_candidate_at_its_place_with_its_strength(shape, m
     assert 0.8 < np.mean(ratios) < 1.1
 
 
-@pytest.mark.parametrize("g", [(0.2, 0.0), (-0.2, 0.0), (0.2, 0.0007), (-0.2, 0.0007), (0.0, 0.3), (0.001, 0.3), (0.3, 0.497)])
+@pytest.mark.parametrize(
+    "g", [(0.2, 0.0), (-0.2, 0.0), (0.2, 0.0007), (-0.2, 0.0007), (0.0, 0.3), (0.001, 0.3), (0.3, 0.497)]
+)
 def test_a_fringe_along_an_axis_or_near_the_finest_is_found_once(g):
     picture = prepared(noise(np.random.default_rng(4), SHAPE) + fringes(SHAPE, [Wave(g, 1.0)]))
     found = candidates(picture)
@@ -121,7 +123,7 @@ def test_nothing_is_looked_for_nearer_to_the_origin_than_asked():
     assert len(candidates(picture, smallest_distance=8.0).ratio) == 0
 
 
-# --- the noise at a place ---------------------------------------------------------------------------------------------
+# --- the noise at a place --------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("density", [white, falling, steeply_falling, blurred, transfer_rings])
@@ -183,7 +185,7 @@ def test_noise_passes_the_matched_filter_with_its_own_density():
     assert np.mean(powers) == pytest.approx(1, abs=0.12)
 
 
-# --- fringes taken out ------------------------------------------------------------------------------------------------
+# --- fringes taken out -----------------------------------------------------------------------------------------------
 
 REMOVED = [
     pytest.param((128, 128), False, id="square"),
@@ -226,7 +228,7 @@ def test_the_block_maxima_are_those_of_what_is_left(shape, masked):
         assert rest.block_maxima == pytest.approx(np.array(blocks))
 
 
-class Interrupted(Exception):
+class InterruptionError(Exception):
     """Something that goes wrong in between."""
 
 
@@ -236,9 +238,9 @@ def test_waves_come_back_also_when_something_goes_wrong_in_between():
 
     def interrupted():
         with waves_removed(picture.spectrum, picture.footprint, np.array([(0.2, 0.1)]), np.array([1.0 + 0j])):
-            raise Interrupted
+            raise InterruptionError
 
-    with pytest.raises(Interrupted):
+    with pytest.raises(InterruptionError):
         interrupted()
     assert (picture.spectrum.transform == before).all()
 

@@ -2,6 +2,8 @@
 
 import numpy as np
 import pytest
+
+from fringespan.peaks.fringes import find_fringes
 from simulated_fringes import (
     Wave,
     blurred,
@@ -16,8 +18,6 @@ from simulated_fringes import (
     transfer_rings,
     white,
 )
-
-from fringespan.peaks.fringes import find_fringes
 
 SHAPE = (128, 128)
 
@@ -43,13 +43,14 @@ def turned(g, separation_bins, rng, shape=SHAPE):
     return tuple(np.array(g) + separation_bins / min(shape) * np.array([np.sin(angle), np.cos(angle)]))
 
 
-# --- several fringes ---------------------------------------------------------------------------------------------------
+# --- several fringes -------------------------------------------------------------------------------------------------
 
 
-def equal_pair(separation):
+def equal_pair(separation, amplitude=0.5):
     def draw(rng):
         g = random_g(rng, SHAPE, 0.36)
-        return [Wave(g, 0.5, rng.uniform(0, 6)), Wave(turned(g, separation, rng), 0.5, rng.uniform(0, 6))]
+        other = turned(g, separation, rng)
+        return [Wave(g, amplitude, rng.uniform(0, 6)), Wave(other, amplitude, rng.uniform(0, 6))]
 
     return draw
 
@@ -73,7 +74,9 @@ def net(rng):
     a = length * np.array([np.sin(turn), np.cos(turn)])
     turn += rng.uniform(1.0, 1.6)
     b = length * rng.uniform(0.8, 1.2) * np.array([np.sin(turn), np.cos(turn)])
-    return [Wave(tuple(g), m, rng.uniform(0, 6)) for g, m in zip((a, b, a + b, a - b), (0.8, 0.7, 0.5, 0.4), strict=True)]
+    return [
+        Wave(tuple(g), m, rng.uniform(0, 6)) for g, m in zip((a, b, a + b, a - b), (0.8, 0.7, 0.5, 0.4), strict=True)
+    ]
 
 
 def many(rng):
@@ -89,6 +92,7 @@ SCENES = [
     pytest.param(equal_pair(1.8), white, 40, id="equal pair 1.8 bins apart"),
     pytest.param(equal_pair(2.5), white, 40, id="equal pair 2.5 bins apart"),
     pytest.param(equal_pair(5.0), white, 40, id="equal pair 5 bins apart"),
+    pytest.param(equal_pair(2.5, 5.0), white, 80, id="strong equal pair 2.5 bins apart"),
     pytest.param(weak_beside_strong(20, 6), white, 40, id="1 beside 20, 6 bins away"),
     pytest.param(weak_beside_strong(100, 12), white, 40, id="1 beside 100, 12 bins away"),
     pytest.param(with_harmonic, white, 40, id="second order"),
@@ -113,7 +117,7 @@ def test_every_fringe_is_found_once_and_nothing_else(draw, density, pictures):
     assert extra <= 2
 
 
-# --- the noise beside them ---------------------------------------------------------------------------------------------
+# --- the noise beside them -------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("density", [white, falling, blurred])
@@ -175,7 +179,7 @@ def test_noise_alone_shows_no_fringe(make, mask, pictures):
     assert false <= expected + 2.33 * np.sqrt(expected) + 0.5
 
 
-# --- fringes that are no plane wave ------------------------------------------------------------------------------------
+# --- fringes that are no plane wave ----------------------------------------------------------------------------------
 
 
 def bent(wave, shape, cycles):

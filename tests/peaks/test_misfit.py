@@ -2,11 +2,11 @@
 
 import numpy as np
 import pytest
-from simulated_fringes import Wave, ellipse_mask, fringes, noise, places, prepared, random_g
 
 from fringespan.peaks.demodulation import demodulate
 from fringespan.peaks.joint_fit import fit_jointly
 from fringespan.peaks.misfit import MISFIT_LIMIT, cell_residuals, split_wave
+from simulated_fringes import Wave, ellipse_mask, fringes, noise, places, prepared, random_g
 
 SHAPE = (128, 128)
 
@@ -19,7 +19,7 @@ def residuals_of(values, start, mask=None):
     return picture, fit, cell_residuals(picture.footprint, fit, np.ones(n))
 
 
-# --- one wave ---------------------------------------------------------------------------------------------------------
+# --- one wave --------------------------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize(("shape", "masked"), [((128, 128), False), ((90, 141), False), ((120, 120), True)])
@@ -42,7 +42,10 @@ def test_strong_neighbours_leave_the_noise_only():
     misfits = []
     for _ in range(60):
         g = np.array(random_g(rng, SHAPE, 0.35))
-        waves = [Wave(tuple(g), 1.0, rng.uniform(0, 6)), Wave((g[0] + 4 / 128, g[1] - 3 / 128), 20.0, rng.uniform(0, 6))]
+        waves = [
+            Wave(tuple(g), 1.0, rng.uniform(0, 6)),
+            Wave((g[0] + 4 / 128, g[1] - 3 / 128), 20.0, rng.uniform(0, 6)),
+        ]
         misfits.append(residuals_of(noise(rng, SHAPE) + fringes(SHAPE, waves), [w.g for w in waves])[2].misfit)
     assert np.mean(misfits, axis=0) == pytest.approx([1, 1], abs=0.2)
 
@@ -57,7 +60,7 @@ def test_the_residual_of_the_cells_adds_up_to_little():
     assert abs(fit.amplitude[0]) == pytest.approx(1.5, abs=0.05)
 
 
-# --- no plane wave ----------------------------------------------------------------------------------------------------
+# --- no plane wave ---------------------------------------------------------------------------------------------------
 
 
 def bent(cycles):
@@ -94,12 +97,12 @@ def test_fringes_that_are_no_plane_wave_are_seen(make):
         wave = Wave(random_g(rng, SHAPE), 1.0, 0.0)
         picture = prepared(noise(rng, SHAPE) + make(wave))
         # a reversed half leaves nothing at the frequency itself: what detection would find lies beside it
-        start = np.array([wave.g]) + (0.0, 0.8 / 128 if make is reversing else 0.0)
+        start = np.array([wave.g]) + np.array([0.0, 0.8 / 128 if make is reversing else 0.0])
         fit, _ = fit_jointly(picture.pixels, demodulate(picture.pixels, start), np.ones(1), np.full(1, 5.0))
         assert cell_residuals(picture.footprint, fit, np.ones(1)).misfit[0] > 2 * MISFIT_LIMIT
 
 
-# --- two waves in place of one ----------------------------------------------------------------------------------------
+# --- two waves in place of one ---------------------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("masked", [False, True])
@@ -113,7 +116,8 @@ def test_two_close_waves_are_told_apart(separation_bins, masked):
         angle = rng.uniform(0, 2 * np.pi)
         other = g + separation_bins / 128 * np.array([np.sin(angle), np.cos(angle)])
         waves = [Wave(tuple(g), 0.5, rng.uniform(0, 6)), Wave(tuple(other), 0.5, rng.uniform(0, 6))]
-        picture, fit, cells = residuals_of(noise(rng, SHAPE) + fringes(SHAPE, waves), [g if rng.random() < 0.5 else other], mask)
+        start = g if rng.random() < 0.5 else other
+        picture, fit, cells = residuals_of(noise(rng, SHAPE) + fringes(SHAPE, waves), [start], mask)
         assert cells.misfit[0] > MISFIT_LIMIT
         shifts = split_wave(picture.footprint, cells, 0, complex(fit.amplitude[0]), 1.0)
         if shifts is not None:
@@ -124,7 +128,9 @@ def test_two_close_waves_are_told_apart(separation_bins, masked):
     assert found >= 38
 
 
-@pytest.mark.parametrize("make", [pytest.param(bent(1.0), id="bent by a period"), pytest.param(ending(0.4), id="only in the middle")])
+@pytest.mark.parametrize(
+    "make", [pytest.param(bent(1.0), id="bent by a period"), pytest.param(ending(0.4), id="only in the middle")]
+)
 def test_a_broad_peak_is_not_taken_for_two_waves(make):
     rng = np.random.default_rng(6)
     taken = 0

@@ -19,7 +19,9 @@ HERE = Path(__file__).resolve().parent
 
 def main() -> None:
     """Write the figure of the demo picture."""
-    micrograph = replace(fs.read(sample_file("two_grains.ome.tif")), pixel_size_relative_uncertainty=0.0075, voltage_kv=300)
+    micrograph = replace(
+        fs.read(sample_file("two_grains.ome.tif")), pixel_size_relative_uncertainty=0.0075, voltage_kv=300
+    )
     regions = fs.read_regions(sample_file("two_grains.json"))
     figure = measurement_figure([fs.measure(micrograph, region) for region in regions])
     figure.savefig(HERE / "two_grains.png", dpi=100)

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any, cast
 
 import click
 
+from fringespan.command_line import complain
 from fringespan.command_line.output_options import (
     STANDARD_OUTPUT,
     OutputOptions,
@@ -21,10 +22,13 @@ from fringespan.command_line.picture_options import PictureOptions, takes_pictur
 from fringespan.exceptions import FringespanError
 
 if TYPE_CHECKING:
+    from datetime import datetime
+
     from fringespan.crystal.phase import Phase
     from fringespan.magnification.budget import Acceptance, Coverage
     from fringespan.magnification.check import MagnificationCheck
     from fringespan.magnification.conditions import Conditions
+    from fringespan.magnification.internal_standard import InternalStandard
     from fringespan.magnification.log import LogEntry
     from fringespan.magnification.reference import ReferenceSpacing
     from fringespan.measurement import Measurement
@@ -68,6 +72,9 @@ def _takes_conditions(command: Callable[..., Any]) -> Callable[..., Any]:
             click.option("--camera-length", type=float, metavar="MM", help="The one that the microscope indicates."),
             click.option("--camera", default="", metavar="TEXT"),
             click.option("--binning", type=click.IntRange(min=1)),
+            click.option(
+                "--date", metavar="DATE", help="When the pictures were taken, as 2025-03-01; now, if left out."
+            ),
             click.option("--specimen", default="", metavar="TEXT", help="Which piece of the reference material."),
             click.option("--remark", default="", metavar="TEXT"),
         ]
@@ -142,6 +149,7 @@ def check(
     log_file: str | None,
     report: str | None,
     standard: str | None,
+    date: str | None,
     picture: PictureOptions,
     output: OutputOptions,
     **about: Any,
@@ -151,6 +159,9 @@ def check(
     from fringespan.measurement import measure
 
     _refuse_impossible(report, output, images)
+    moment = _moment(date)
+    if picture.phases.strip().lower() != "none":
+        complain("--phases plays no part in a check; --reference names the material", "fringespan check")
     conditions = _conditions(about, picture)
     chosen, uncertainty = _chosen_reference(reference, reference_uncertainty)
     pictures: list[list[Measurement]] = []
@@ -175,10 +186,15 @@ def check(
         acceptance=cast("Acceptance", acceptance),
         coverage=cast("Coverage", coverage),
     )
-    _print(result, conditions, chosen, pictures, standard, temperature, output)
-    _write(result, pictures, images, conditions, used, report, output)
+    inside = [] if standard is None else _measured_by_standard(pictures, standard, chosen, temperature)
+    _print(result, conditions, inside, output)
+    _write(result, pictures, images, inside, output)
+    if report is not None:
+        from fringespan.export.check_report import CheckReport, write_check_report
+
+        write_check_report(CheckReport(check=result, measurements=used, conditions=conditions, made_at=moment), report)
     if log_file is not None:
-        _add_to_log(result, used, conditions, log_file)
+        _add_to_log(_entry(result, used, conditions, moment), log_file)
 
 
 def _refuse_impossible(report: str | None, output: OutputOptions, images: Sequence[str]) -> None:
@@ -231,14 +247,26 @@ def _chosen_reference(
         raise click.UsageError(str(problem), click.get_current_context()) from problem
 
 
-def _print(
-    result: MagnificationCheck,
-    conditions: Conditions,
-    reference: Phase | ReferenceSpacing,
+def _measured_by_standard(
     pictures: Sequence[Sequence[Measurement]],
-    standard: str | None,
+    standard: str,
+    reference: Phase | ReferenceSpacing,
     temperature: float | None,
-    output: OutputOptions,
+) -> list[InternalStandard]:
+    """Return the other regions of each picture, measured by the one of that name."""
+    from fringespan.magnification.internal_standard import calibrate_within_picture
+
+    found = []
+    for group in pictures:
+        own = [m for m in group if m.region.name == standard]
+        others = [m for m in group if m.region.name != standard]
+        if own and others:
+            found.append(calibrate_within_picture(own[0], reference, others, temperature_c=temperature))
+    return found
+
+
+def _print(
+    result: MagnificationCheck, conditions: Conditions, inside: Sequence[InternalStandard], output: OutputOptions
 ) -> None:
     if output.to_standard_output:
         return
@@ -246,18 +274,12 @@ def _print(
     from fringespan.export.check_text import check_lines, internal_standard_lines
     from fringespan.export.log_text import conditions_text
     from fringespan.export.plain_text import Line, paragraph
-    from fringespan.magnification.internal_standard import calibrate_within_picture
 
     width = text_width()
     lines = check_lines(result, width)
     lines += paragraph(conditions_text(conditions), width, first="  conditions: ", emphasis="quiet")
-    if standard is not None:
-        for group in pictures:
-            own = [m for m in group if m.region.name == standard]
-            others = [m for m in group if m.region.name != standard]
-            if own and others:
-                inside = calibrate_within_picture(own[0], reference, others, temperature_c=temperature)
-                lines += [Line(""), *internal_standard_lines(inside, width)]
+    for one in inside:
+        lines += [Line(""), *internal_standard_lines(one, width)]
     print_lines(lines)
 
 
@@ -265,17 +287,17 @@ def _write(
     result: MagnificationCheck,
     pictures: Sequence[Sequence[Measurement]],
     images: Sequence[str],
-    conditions: Conditions,
-    used: Sequence[Measurement],
-    report: str | None,
+    inside: Sequence[InternalStandard],
     output: OutputOptions,
 ) -> None:
     from fringespan.export.check_text import reflection_table
     from fringespan.export.table import csv_text
-    from fringespan.record import document_of, json_text, magnification_values, record_of
+    from fringespan.record import document_of, json_text, magnification_values, plain_values, record_of
 
     if output.json is not None:
         values = magnification_values(result)
+        if inside:
+            values["mismatches"] = plain_values([m for one in inside for m in one.mismatches], "mismatches")
         documents = [document_of(record_of(group, magnification=values)) for group in pictures]
         files = _one_file_a_picture(output.json, images)
         for document, file in zip(documents, files, strict=False):
@@ -288,10 +310,6 @@ def _write(
         from fringespan.export.figure import write_figure
 
         write_figure(check_figure(result), output.figure)
-    if report is not None:
-        from fringespan.export.check_report import CheckReport, write_check_report
-
-        write_check_report(CheckReport(check=result, measurements=used, conditions=conditions), report)
 
 
 def _one_file_a_picture(file: str, images: Sequence[str]) -> list[Path]:
@@ -308,20 +326,33 @@ def _one_file_a_picture(file: str, images: Sequence[str]) -> list[Path]:
     ]
 
 
-def _add_to_log(
-    result: MagnificationCheck, measured: Sequence[Measurement], conditions: Conditions, log_file: str
-) -> None:
+def _add_to_log(entry: LogEntry, log_file: str) -> None:
     from fringespan.magnification.log import CheckLog, log_path
 
     path = log_path() if log_file == OWN_LOG else Path(log_file)
     with CheckLog(path) as log:
-        entry = log.add(_entry(result, measured, conditions))
-    click.echo(f"entry {entry.number} added to the log {path}", err=True)
+        added = log.add(entry)
+    click.echo(f"entry {added.number} added to the log {path}", err=True)
 
 
-def _entry(result: MagnificationCheck, measured: Sequence[Measurement], conditions: Conditions) -> LogEntry:
-    import json
+def _moment(date: str | None) -> datetime:
+    """Return when the pictures were taken; a date without a zone is local time."""
     from datetime import UTC, datetime
+
+    if date is None:
+        return datetime.now(UTC)
+    try:
+        return datetime.fromisoformat(date).astimezone(UTC)
+    except ValueError:
+        raise click.BadParameter(
+            f"{date!r} is no date as 2025-03-01 or 2025-03-01T10:20", click.get_current_context(), param_hint="'--date'"
+        ) from None
+
+
+def _entry(
+    result: MagnificationCheck, measured: Sequence[Measurement], conditions: Conditions, moment: datetime
+) -> LogEntry:
+    import json
     from importlib import metadata
 
     from fringespan.magnification.log import LogEntry
@@ -330,7 +361,7 @@ def _entry(result: MagnificationCheck, measured: Sequence[Measurement], conditio
     pictures = {id(m.micrograph): m.micrograph for m in measured}.values()
     row, column = (u / s for u, s in zip(result.scale_uncertainty, result.scale, strict=True))
     return LogEntry(
-        checked_at=datetime.now(UTC).isoformat(),
+        checked_at=moment.isoformat(),
         conditions=conditions,
         pictures=", ".join(p.name for p in pictures),
         sha256=", ".join(p.sha256() for p in pictures),

@@ -90,6 +90,9 @@ def demo(out: str, view: bool) -> None:
 def _new_folder(wanted: Path) -> Path:
     """Make a folder that did not exist, with a number behind its name where that is taken."""
     number = 1
+    wanted = wanted.resolve()
+    if not wanted.name:
+        raise click.UsageError("--out must name a folder to make, not the root of a disk")
     while True:
         folder = wanted if number == 1 else wanted.with_name(f"{wanted.name}-{number}")
         try:

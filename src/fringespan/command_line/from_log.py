@@ -133,12 +133,19 @@ def log_choice(_context: click.Context, _option: click.Parameter, value: str | N
     file, _, number = value.rpartition(":")
     if file and number.isdecimal() and not Path(value).exists():
         return LogChoice(file, int(number))
-    with_log = Path(value)
-    if with_log.is_file() and with_log.open("rb").read(15) != b"SQLite format 3":
+    if not _may_be_log(Path(value)):
         raise click.BadParameter(
             f"{value!r} is no log; write --from-log after the pictures, or --from-log {_NEWEST}, a number, or a log's file"
         )
     return LogChoice(value, None)
+
+
+def _may_be_log(path: Path) -> bool:
+    """Say whether a file is a database, or not there yet."""
+    if not path.is_file():
+        return True
+    with path.open("rb") as file:
+        return file.read(15) == b"SQLite format 3"
 
 
 def from_log_option() -> Callable[[Callable[..., Any]], Callable[..., Any]]:

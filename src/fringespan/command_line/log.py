@@ -81,7 +81,9 @@ def list_entries(file: str | None, most: int, overdue: float | None, json_file: 
     with _opened(file) as book:
         entries = book.entries(_filter(wanted), most=most)
         late = None if overdue is None else book.overdue(overdue)
-        lines = paragraph(f"{len(book)} {'entry' if len(book) == 1 else 'entries'} in {book.path}", width, emphasis="heading")
+        lines = paragraph(
+            f"{len(book)} {'entry' if len(book) == 1 else 'entries'} in {book.path}", width, emphasis="heading"
+        )
     lines += log_lines(entries, width) if late is None else overdue_lines(late, overdue or 0.0, width)
     if late is None and len(entries) == most:
         lines.append(Line(f"Only the newest {most} are shown (--most).", "quiet"))
@@ -129,7 +131,8 @@ def import_table(table: str, file: str | None) -> None:
     from fringespan.exceptions import RecordError
 
     try:
-        text = Path(table).read_text(encoding="utf-8-sig")
+        with open(table, encoding="utf-8-sig", newline="") as source:
+            text = source.read()
     except UnicodeDecodeError:
         raise RecordError(f"{table}: not a text in UTF-8; save the table as CSV in UTF-8") from None
     with _opened(file, new=True) as book:

@@ -74,6 +74,7 @@ def _draw_lengths(axes: Axes, check: MagnificationCheck) -> None:
     axes.plot(direction, 100 * (fitted - 1), color=_LINE, linewidth=0.9, label="fit")
     axes.axhline(0.0, color=_LINE, linewidth=0.7, linestyle=(0, (5, 3)), label="nominal")
     labelled: set[bool] = set()
+    named: list[float] = []
     for number, r in enumerate(_shown(check)):
         length = math.hypot(*r.g_per_nm) * (r.expected_d_nm or 0.0)
         at = math.degrees(math.atan2(-r.g_per_nm[0], r.g_per_nm[1])) % 180
@@ -91,7 +92,10 @@ def _draw_lengths(axes: Axes, check: MagnificationCheck) -> None:
             label=None if r.used in labelled else "used" if r.used else "left out",
         )
         labelled.add(r.used)
-        if number < _LABELLED and r.hkl is not None:
+        # reflections of one direction lie over each other: the strongest is named
+        is_free = all(abs((at - other + 90) % 180 - 90) > 2 for other in named)
+        if number < _LABELLED and r.hkl is not None and is_free:
+            named.append(at)
             axes.annotate(
                 indices_text(r.hkl),
                 (at, 100 * (length - 1)),

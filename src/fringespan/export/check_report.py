@@ -265,7 +265,8 @@ def _pdf(report: CheckReport) -> bytes:
 
     content = io.BytesIO()
     lines = ["Magnification check", ""]
-    lines += [f"{name}: {value}" for name, value in report.facts]
+    for name, value in report.facts:
+        lines += _wrapped(f"{name}: {value}")
     lines += ["", *(line.text for line in check_lines(report.check, _TEXT_WIDTH)), ""]
     lines += _wrapped(_CARE)
     with figure_style(), PdfPages(content, metadata={"CreationDate": None, "Title": "Magnification check"}) as pages:

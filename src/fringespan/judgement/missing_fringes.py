@@ -62,6 +62,9 @@ def needed_fringes(
     shortest = min(footprint.shape[0], footprint.shape[1] * aspect)
     lowest = settings.smallest_distance_bins / shortest
     used = background.density[(radius >= lowest) & (radius <= 0.5)]
+    if not used.size:
+        # the smallest of regions: hardly a ring lies between the nearest distance and the end of the spectrum
+        used = background.density[-1:]
     root = math.sqrt(detection_threshold(footprint.count, settings.false_peaks_per_region)) + _NINE_IN_TEN
     # the lowest few rings are low by chance only
     densities = np.percentile(used, 10), used.max()

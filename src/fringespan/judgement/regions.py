@@ -275,7 +275,7 @@ def region_cautions(
         if size is None:
             said += scale_cautions(None, None, [c.code for c in micrograph.cautions], False)
         aspect = round(size[1] / size[0], 3) if size is not None else 1.0
-        mean = float(pixels.trend[0] + (pixels.trend[2] + pixels.trend[7]) / 3)
+        mean = pixels.unit * float(pixels.trend[0] + (pixels.trend[2] + pixels.trend[7]) / 3)
         needed = needed_fringes(spectrum, pixels.footprint, settings, aspect)
         said.append(no_fringe_caution(needed, size, mean, micrograph.dark_level))
         if is_lopsided(spectrum):

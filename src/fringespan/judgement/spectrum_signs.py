@@ -108,6 +108,8 @@ def _places(shape: tuple[int, int]) -> NDArray[np.int32]:
     along_columns = np.arange(8, columns - 1)
     groups += [along_rows * columns, along_rows * columns + min(beside, columns - 1)]
     groups += [along_columns, (beside % ny) * columns + along_columns]
+    # a spectrum too small to have a group at all shows nothing there: any bin does, the same for both
+    groups = [g if len(g) else np.array([ny // 3 * columns + columns // 2]) for g in groups]
     return np.stack([np.sort(random.choice(g, _SAMPLES, replace=len(g) < _SAMPLES)) for g in groups]).astype(np.int32)
 
 

@@ -310,7 +310,7 @@ def check_magnification(
     expansion : Expansion, optional
         Thermal expansion; default: what is known of the reference.
     tilt_deg : float, optional
-        Standard uncertainty of the specimen's tilt off the zone, about each of two axes.
+        Standard uncertainty of the specimen's tilt off the zone, about each of two axes, its most probable value 0.
     tolerance : float, optional
         Largest deviation of the pixel size allowed, as a fraction (0.01 is 1 per cent).
     acceptance : {"simple", "guarded"}, optional
@@ -334,7 +334,8 @@ def check_magnification(
     The nominal pixel size may be off by up to 10 %, rows and columns by about 2 % from each other, a shear be as large.
     With g the vectors measured by the nominal pixel size and p those of the reference in the crystal's own frame,
     g = F^T R p is fitted by weighted least squares; F = [[row, 0], [shear, column]] is true over nominal pixel size and R
-    the crystal's turn, which is not known. Crystals that show one set of fringes each give a point of an ellipse,
+    the crystal's turn, which is not known. Tilts off the zone make spacings look larger, never smaller: their mean effect
+    is corrected. Crystals that show one set of fringes each give a point of an ellipse,
     |F^-T g| = 1/d; five numbers of different direction are enough for F. If F cannot be determined, one factor is.
 
     References
@@ -359,6 +360,7 @@ def check_magnification(
     estimates, isotropic = _estimates(regions, grains, peaks)
     combined = combine(estimates)
     final = _values_in_pixels(combined, nominal, regions[0].micrograph.shear)
+    final[: 1 if isotropic else 2] *= 1 + math.radians(tilt_deg) ** 2 / 2
     budgets = tuple(
         _budget(name, k, final, combined, at, tilt_deg, nominal, len(estimates))
         for k, name in enumerate(_ONE_QUANTITY if isotropic else _QUANTITIES)
@@ -482,7 +484,7 @@ def _picture_numbers(regions: Sequence[Measurement]) -> list[int]:
 def _values_in_pixels(combined: Combined, nominal: tuple[float, float], shear_before: float) -> NDArray[np.float64]:
     """Return scale along rows and columns, and the shear in nominal column pixels per row."""
     if len(combined.values) == 1:
-        return combined.values
+        return combined.values.copy()
     row, column, shear = combined.values
     # a picture that is sheared already: the shear of F comes on top of that
     return np.array([row, column, shear * nominal[0] / nominal[1] + column * shear_before])
@@ -564,11 +566,12 @@ def _budget(
             ),
             BudgetLine(
                 source="tilt",
-                # a tilt by s about each of two axes lengthens spacings by s^2/2 on average with s^2/sqrt(2) about it;
-                # not corrected, but taken in whole (GUM F.2.4.5)
-                standard_uncertainty=tilt if is_shear else math.sqrt(3) / 2 * tilt,
+                # tilts by s about each of two axes lengthen spacings by s^2/2 on average, which is corrected, and by
+                # s^2/sqrt(2) about that
+                standard_uncertainty=tilt if is_shear else tilt / math.sqrt(2),
                 sensitivity=1.0 if is_shear else value,
-                note=f"{tilt_deg:g} degrees off the zone about each axis; spacings look larger, never smaller",
+                note=f"{tilt_deg:g} degrees off the zone about each axis"
+                + ("" if is_shear else f"; spacings look larger by {50 * tilt:.2g} % on average, corrected"),
                 remedy="tilt the zone axis into the beam by its diffraction pattern",
             ),
         ),

@@ -89,7 +89,7 @@ def combine(estimates: Sequence[Estimate]) -> Combined:
         regions[c] = math.sqrt(tau_region * float((weights[:, c] ** 2).sum()))
         between[c] = math.sqrt(tau_picture * float((w**2).sum()))
     fit = np.array([[e.fit.fit_covariance[c, c] for c in range(number)] for e in estimates])
-    crystal = np.array([[e.fit.crystal_covariance[c, c] for c in range(number)] for e in estimates])
+    crystal = np.array([[max(e.fit.crystal_covariance[c, c], 0.0) for c in range(number)] for e in estimates])
     freedom = np.array(
         [
             effective_degrees_of_freedom(

@@ -21,6 +21,9 @@ __all__ = ["FittedReflection", "GeometryFit", "fit_geometry"]
 _OUTLIER_SQUARE = 16.0
 """A reflection this far off the fit of the others (chi square, two directions; p = 3e-4) is shown, but not used."""
 
+_MOST_OUTLIERS = 0.25
+"""Of the reflections; more than that are not outliers, but show how uncertain all are."""
+
 _INCONSISTENT = 0.05
 """Probability below which the scatter about the fit is taken as a sign of understated uncertainties."""
 
@@ -143,8 +146,9 @@ def fit_geometry(
     Notes
     -----
     Reflections that lie off the fit of the others are left out of it one by one, the worst first, and returned as not
-    used. If those used scatter more than chi square allows at 5 %, the uncertainty is raised by the root of chi square
-    over the degrees of freedom (R. T. Birge, Phys. Rev. 40 (1932) 207, from memory).
+    used; where more than a quarter do, all stay. If those used scatter more than chi square allows at 5 %, the
+    uncertainty is raised by the root of chi square over the degrees of freedom (R. T. Birge, Phys. Rev. 40 (1932) 207, from
+    memory).
     """
     rows = [
         _Row(
@@ -158,16 +162,20 @@ def fit_geometry(
         for number, grain in grains.items()
         for a in grain.peaks
     ]
-    used = list(range(len(rows)))
-    solution = _solve([rows[i] for i in used], grains, isotropic)
+    everything = list(range(len(rows)))
+    used = everything
+    solution = first = _solve(rows, grains, isotropic)
     while solution is not None:
         worst = _worst(solution, [rows[i] for i in used])
         if worst is None:
             break
         fewer = [i for position, i in enumerate(used) if position != worst]
         without = _solve([rows[i] for i in fewer], grains, isotropic)
-        if without is None or 2 * len(fewer) - len(without.inverse) < 1:
-            break  # nothing would be left to judge by: all stay, and the scatter raises the uncertainty
+        judged = without is not None and 2 * len(fewer) - len(without.inverse) >= 1
+        if not judged or len(rows) - len(fewer) > max(1, _MOST_OUTLIERS * len(rows)):
+            # too few to judge by, or too many for outliers: all stay, and their scatter raises the uncertainty
+            used, solution = everything, first
+            break
         used, solution = fewer, without
     if solution is None:
         return None

@@ -446,7 +446,7 @@ class CheckLog:
         statement = f"INSERT INTO checks ({', '.join(names)}) VALUES ({', '.join('?' * len(names))}) ON CONFLICT (id) DO NOTHING"
         with self._writing() as connection:
             before = connection.total_changes
-            connection.executemany(statement, ([_cells(entry)[name] for name in names] for entry in entries))
+            connection.executemany(statement, (tuple(map(_cells(entry).get, names)) for entry in entries))
             return connection.total_changes - before
 
     def withdraw(self, number: int, because: str) -> None:
@@ -599,7 +599,7 @@ class CheckLog:
         RecordError
             If a row makes no sense; its line is named, and nothing is added.
         """
-        reader = csv.DictReader(io.StringIO(text.removeprefix("\N{ZERO WIDTH NO-BREAK SPACE}")))
+        reader = csv.DictReader(io.StringIO(text.removeprefix("\N{ZERO WIDTH NO-BREAK SPACE}"), newline=""))
         missing = _NEEDED - set(reader.fieldnames or ())
         if missing:
             raise RecordError(f"{name}: the columns {', '.join(sorted(missing))} are missing in its first line")

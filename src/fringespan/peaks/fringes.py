@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from functools import partial
 
+import numba
 import numpy as np
 from numpy.typing import NDArray
 
@@ -21,6 +22,9 @@ __all__ = ["Fringes", "find_fringes"]
 _PIECE_BINS = 5.0
 _PIECE_RATIO = 0.2
 """A peak nearer than this to another, and weaker than this share of it, is a piece of it: the skirt of its envelope."""
+
+_LEFT_OF_PAIR = 0.02
+"""Share of the power that near waves may leave over: pairs leave 0.003 at most, parts of a bent fringe 0.06 at least."""
 
 _STRONG = 4.0
 """A fringe this many times above the detection threshold is fitted before weaker ones are looked for."""
@@ -124,10 +128,18 @@ def _distances(
     footprint: Footprint, frequency: NDArray[np.float64], others: NDArray[np.float64]
 ) -> NDArray[np.float64]:
     """Return the distance in bins of each frequency from each other one or its opposite, shape (n, m)."""
-    bins = np.array(footprint.shape)
-    difference = np.hypot(*((frequency[:, None] - others[None]) * bins).transpose(2, 0, 1))
-    total = np.hypot(*((frequency[:, None] + others[None]) * bins).transpose(2, 0, 1))
-    return np.asarray(np.minimum(difference, total))
+    out = np.empty((len(frequency), len(others)))
+    _fill_distances(*footprint.shape, frequency, others, out)
+    return out
+
+
+@numba.njit(cache=True, nogil=True)
+def _fill_distances(ny, nx, frequency, others, out):  # type: ignore[no-untyped-def]
+    for j in range(frequency.shape[0]):
+        for k in range(others.shape[0]):
+            difference = np.hypot((frequency[j, 0] - others[k, 0]) * ny, (frequency[j, 1] - others[k, 1]) * nx)
+            total = np.hypot((frequency[j, 0] + others[k, 0]) * ny, (frequency[j, 1] + others[k, 1]) * nx)
+            out[j, k] = min(difference, total)
 
 
 def _near_stronger(
@@ -146,7 +158,9 @@ def _without_pieces(
     if len(density) < 2:
         return fit, density, limit
     distance = _distances(pixels.footprint, fit.frequency, fit.frequency)
-    weaker = fit.power_ratio[:, None] < _PIECE_RATIO * fit.power_ratio[None]
+    # not by their ratio to the noise, which a near peak seems to raise
+    power = np.abs(fit.amplitude) ** 2
+    weaker = power[:, None] < _PIECE_RATIO * power[None]
     pieces = np.asarray(((distance < _PIECE_BINS) & weaker).any(axis=1))
     if not pieces.any():
         return fit, density, limit
@@ -175,7 +189,10 @@ def _merged(
     stays, frequency = np.ones(n, bool), fit.frequency.copy()
     for label in np.unique(group):
         members = np.flatnonzero(group == label)
-        if len(members) == 1 or residuals.misfit[members].max() <= MISFIT_LIMIT:
+        misfit = residuals.misfit[members].max()
+        # the misfit is the mean of twelve projections, so this is the power left over against that of the strongest
+        left = 12 * misfit / fit.power_ratio[members].max()
+        if len(members) == 1 or misfit <= MISFIT_LIMIT or left < _LEFT_OF_PAIR:
             continue
         strongest = members[fit.power_ratio[members].argmax()]
         stays[members] = False

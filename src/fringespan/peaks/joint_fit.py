@@ -290,6 +290,8 @@ def fit_jointly(
             break
         # never further than a linear step can be trusted: half a bin
         step *= np.minimum(1, 0.5 / np.maximum(longest, 1e-9))[:, None]
+        if round_number == _MOST_STEPS - 1:
+            break
         # a step that the sums over blocks can follow needs no new pass over the pixels
         short = ~settled & (10 * longest * coarseness < 0.05 * sigma.min(axis=1)) & (coarseness < _COARSE)
         far = ~settled & ~short

@@ -53,6 +53,8 @@ class CellResiduals:
         Pixels of each cell.
     middle_y, middle_x : ndarray
         Middles of the cells, in pixels from the middle of the rectangle.
+    height, width : ndarray
+        Of the cells down and across, in pixels.
     """
 
     residual: NDArray[np.complex128]
@@ -60,6 +62,8 @@ class CellResiduals:
     counts: NDArray[np.float64]
     middle_y: NDArray[np.float64]
     middle_x: NDArray[np.float64]
+    height: NDArray[np.float64]
+    width: NDArray[np.float64]
 
 
 @lru_cache(maxsize=32)
@@ -214,7 +218,8 @@ def cell_residuals(footprint: Footprint, fit: JointFit, density: NDArray[np.floa
         cells.edges_y, cells.edges_x, cells.polynomials, demodulation.frequency, fit.frequency, fit.amplitude,
         density, footprint.count, residual, misfit,
     )  # fmt: skip
-    return CellResiduals(residual, misfit, cells.counts, cells.middle_y, cells.middle_x)
+    height, width = np.diff(cells.edges_y).astype(float), np.diff(cells.edges_x).astype(float)
+    return CellResiduals(residual, misfit, cells.counts, cells.middle_y, cells.middle_x, height, width)
 
 
 def split_wave(
@@ -243,6 +248,8 @@ def split_wave(
     bins = 1 / np.array(footprint.shape)
     y = np.repeat(cells.middle_y, cells.middle_x.size)[used] * bins[0]
     x = np.tile(cells.middle_x, cells.middle_y.size)[used] * bins[1]
+    height = np.repeat(cells.height, cells.middle_x.size)[used] * bins[0]
+    width = np.tile(cells.width, cells.middle_y.size)[used] * bins[1]
     counts = cells.counts.ravel()[used]
     data = cells.residual[k].ravel()[used] + amplitude * counts
     grid = np.arange(-14, 15) / 4
@@ -261,7 +268,7 @@ def split_wave(
         [first + 0.5 * along, first - 0.5 * along],
         [first + 1.0 * along, first - 1.0 * along],
     ):
-        result = _two_waves(y, x, counts, data, np.array(start))
+        result = _two_waves(y, x, height, width, counts, data, np.array(start))
         if result is not None and (best is None or result[0] < best[0]):
             best = result
     if best is None or np.hypot(*(best[1][0] - best[1][1])) < 1.0 or np.abs(best[1]).max() > 4:
@@ -275,6 +282,8 @@ def split_wave(
 def _two_waves(
     y: NDArray[np.float64],
     x: NDArray[np.float64],
+    height: NDArray[np.float64],
+    width: NDArray[np.float64],
     counts: NDArray[np.float64],
     data: NDArray[np.complex128],
     shift: NDArray[np.float64],
@@ -285,6 +294,8 @@ def _two_waves(
 
     def model(at: NDArray[np.float64]) -> tuple[NDArray[np.complex128], NDArray[np.complex128], float]:
         waves = np.exp(2j * np.pi * (np.outer(y, at[:, 0]) + np.outer(x, at[:, 1]))) * root[:, None]
+        # a wave cancels part of itself within a cell
+        waves = waves * np.sinc(np.outer(height, at[:, 0])) * np.sinc(np.outer(width, at[:, 1]))
         c = np.linalg.lstsq(waves, scaled, rcond=None)[0]
         left = scaled - waves @ c
         return waves * c, left, float(np.vdot(left, left).real)
