@@ -52,8 +52,9 @@ SYSTEM_PACKAGES = {
                     "libxcb-shape0": "xcb-shape",
                 }.items()
             },
-            "libgl1-mesa-dri": lambda: any(Path("/usr/lib").rglob("swrast_dri.so"))
-            or any(Path("/usr/lib").rglob("libgallium*.so")),
+            "libgl1-mesa-dri": lambda: (
+                any(Path("/usr/lib").rglob("swrast_dri.so")) or any(Path("/usr/lib").rglob("libgallium*.so"))
+            ),
         }
         if sys.platform == "linux"
         else {}

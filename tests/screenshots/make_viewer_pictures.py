@@ -45,7 +45,9 @@ def process_events(until: Callable[[], bool]) -> None:
 
 
 @contextmanager
-def viewer_with(micrograph: fs.Micrograph | None, regions: Any = (), theme: str = "dark", **options: Any) -> Iterator[Any]:
+def viewer_with(
+    micrograph: fs.Micrograph | None, regions: Any = (), theme: str = "dark", **options: Any
+) -> Iterator[Any]:
     """Open a viewer for one picture, and close it."""
     from fringespan.viewer.open import open_viewer
     from fringespan.viewer.workplace import workplace_of
@@ -101,7 +103,9 @@ def every_state(folder: Path) -> None:
         settle(viewer, workplace)
         save(viewer, folder / "no_fringe.png")
     gold = fs.read_regions(sample_file("two_grains.json"))[:1]
-    name = "a picture with a very long name as microscopes like to give them 2026-03-14 15h09m26s 300kV 600kx 0001.ome.tif"
+    name = (
+        "a picture with a very long name as microscopes like to give them 2026-03-14 15h09m26s 300kV 600kx 0001.ome.tif"
+    )
     with viewer_with(replace(picture("two_grains"), name=name), gold) as (viewer, workplace):
         data = np.array(workplace.desk.regions_layer.data[0])
         workplace.desk.regions_layer.data = [(data[0] + (data - data[0]) * 0.05, "polygon")]

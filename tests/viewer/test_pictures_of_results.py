@@ -5,6 +5,7 @@ import pytest
 
 import fringespan as fs
 from fringespan.viewer.fringe_lines import dashes, fringe_lines
+from fringespan.viewer.line_angles import planes_to_line_deg
 from fringespan.viewer.spectrum_image import spectrum_image
 from fringespan.viewer.state import DrawnRegion, MeasuredRegion
 from fringespan.viewer.wording import region_words, spacing, table_text, uncertainty_parts
@@ -94,3 +95,28 @@ def test_without_a_pixel_size_everything_is_in_pixels(measurement, micrograph):
     assert uncertainty_parts(bare.peaks[0]) is None
     assert "px" in region_words(region, bare.micrograph)
     assert "d (px)" in table_text(region, "pm")
+
+
+# fringes whose spacing points along `direction` run at right angles to it; the line from (0, 0) to (rows, columns)
+LINES = [
+    pytest.param(90.0, ((0, 0), (0, 50)), (0.02, 0.02), 0.0, id="level fringes, level line"),
+    pytest.param(0.0, ((0, 0), (0, 50)), (0.02, 0.02), 90.0, id="upright fringes, level line"),
+    pytest.param(0.0, ((0, 0), (50, 50)), (0.02, 0.02), 45.0, id="upright fringes, line down to the right"),
+    pytest.param(60.0, ((0, 0), (-50, 50)), (0.02, 0.02), 75.0, id="fringes at 150, line at 45"),
+    pytest.param(60.0, ((-50, 50), (0, 0)), (0.02, 0.02), 75.0, id="the other way round"),
+    # a line at 45 degrees in pixels is one at atan(2) = 63.43 degrees where rows are twice as far apart
+    pytest.param(90.0, ((0, 0), (-50, 50)), (0.04, 0.02), 63.435, id="pixels that are not square"),
+]
+
+
+@pytest.mark.parametrize(("direction", "line", "size", "angle"), LINES)
+def test_angle_of_planes_to_a_line(make_peak, direction, line, size, angle):
+    micrograph = fs.Micrograph(np.zeros((60, 60)), pixel_size_nm=size)
+    peak = make_peak(0.2, direction)
+    found, uncertainty = planes_to_line_deg(peak, line, micrograph)
+    assert found == pytest.approx(angle, abs=1e-3)
+    assert uncertainty == peak.direction_uncertainty_deg
+
+
+def test_a_line_without_length_has_no_angle(make_peak):
+    assert planes_to_line_deg(make_peak(0.2, 10), ((3, 3), (3, 3)), fs.Micrograph(np.zeros((60, 60)))) is None

@@ -271,3 +271,27 @@ def test_closing_the_window_while_measuring_ends_the_thread(here):
     here.viewer.close()
     here.qtbot.waitUntil(lambda: here.workplace.measurer is None, timeout=10_000)
     assert measurer.join(20)
+
+
+def test_angles_to_a_line_appear_while_it_is_drawn_and_go_with_it(here, qtbot):
+    dock = here.dock("Spacings")
+    column = [dock.model.headerData(k, Qt.Orientation.Horizontal) for k in range(dock.model.columnCount())].index(
+        "to line (°)"
+    )
+    assert dock.table.isColumnHidden(column)
+    qtbot.mouseClick(here.dock("Picture and regions").tools["Line"], LEFT)
+    mouse = here.mouse
+    mouse.drag(mouse.at(220, 40, here.layer), mouse.at(220, 200, here.layer))
+    assert not dock.table.isColumnHidden(column)
+    (region,) = here.state.regions
+    # of the spacings at 20 and 80 degrees, the fringes run at 110 and 170: 70 and 10 degrees off a level line
+    shown = sorted(float(text.split("(")[0]) for text in shown_column(here, column)[:2])
+    assert shown == pytest.approx([10, 70], abs=0.8)
+    layer = here.desk.regions_layer
+    layer.selected_data = {1}
+    layer.remove_selected()
+    assert dock.table.isColumnHidden(column)
+    assert here.state.regions == (region,)
+    here.draw_rectangle(here.layer, (20, 20), (100, 100))
+    assert here.state.regions[-1].drawn.name == "region 2", "a line takes no number"
+    here.wait_until_measured()

@@ -18,12 +18,15 @@ from fringespan.micrograph import Micrograph
 from fringespan.viewer.fringe_lines import dashes, fringe_lines
 from fringespan.viewer.layers import (
     METADATA_KEY,
+    drawn_line,
     drawn_regions,
     is_picture,
     is_regions_layer_of,
     name_regions,
     new_lines_layer,
     new_regions_layer,
+    place_of_region,
+    region_number,
     set_pixel_size,
     show_lines,
     shown_picture,
@@ -37,7 +40,7 @@ if TYPE_CHECKING:
 
 __all__ = ["Desk", "Tool"]
 
-Tool = Literal["rectangle", "ellipse", "polygon"]
+Tool = Literal["rectangle", "ellipse", "polygon", "line"]
 
 _CRYSTAL = "crystal extent"
 _FRINGES = "fringes of the selected spacing"
@@ -122,7 +125,7 @@ class Desk:
         return self._problem
 
     def draw(self, tool: Tool) -> None:
-        """Let the user draw a region with one of napari's own tools."""
+        """Let the user draw a region, or a line that angles are measured to, with one of napari's own tools."""
         layer = self._ready_regions_layer()
         if layer is not None:
             layer.mode = f"add_{tool}"
@@ -167,7 +170,7 @@ class Desk:
         current = self.state.current
         if current is None or self._regions is None or self._picture is None:
             return
-        place = [r.id for r in drawn_regions(self._regions, self._picture)].index(current.drawn.id)
+        place = place_of_region(self._regions, current.drawn.id)
         self._regions.selected_data = {place}
         self._regions.remove_selected()
 
@@ -176,7 +179,7 @@ class Desk:
         current = self.state.current
         if current is None or self._regions is None or self._picture is None:
             return
-        place = [r.id for r in drawn_regions(self._regions, self._picture)].index(current.drawn.id)
+        place = place_of_region(self._regions, current.drawn.id)
         data, kinds = list(self._regions.data), list(self._regions.shape_type)
         data[place] = np.add(data[place], [rows, columns])
         with self._quietly():
@@ -235,6 +238,7 @@ class Desk:
         elif removed is self._regions:
             self._release_regions()
             self.state.set_regions([])
+            self.state.set_line(None)
         else:
             self._lines = {name: layer for name, layer in self._lines.items() if layer is not removed}
 
@@ -348,13 +352,14 @@ class Desk:
         if layer is None or picture is None or self._writing or len(layer.selected_data) != 1:
             return
         (place,) = layer.selected_data
-        drawn = drawn_regions(layer, picture)
-        if place < len(drawn):
-            self.state.select_region(drawn[place].id)
+        number = region_number(layer, place)
+        if number:
+            self.state.select_region(number)
 
     def _read_regions(self, *, dragged: bool = False) -> None:
         if self._regions is not None and self._picture is not None and self._problem is None:
             self.state.set_regions(drawn_regions(self._regions, self._picture), dragged=dragged)
+            self.state.set_line(drawn_line(self._regions, self._picture))
 
     def _write_names(self, drawn: Any) -> None:
         if self._regions is None:

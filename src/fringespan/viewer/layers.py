@@ -20,6 +20,7 @@ from fringespan.exceptions import UnreadablePictureError
 from fringespan.micrograph import PIXEL_SIZE_LIMITS_NM, Micrograph
 from fringespan.reading.stored_picture import COLOUR
 from fringespan.region import RegionKind
+from fringespan.viewer.line_angles import Line
 from fringespan.viewer.state import DrawnRegion
 
 if TYPE_CHECKING:
@@ -28,6 +29,7 @@ if TYPE_CHECKING:
 
 __all__ = [
     "FROM_LAYER",
+    "drawn_line",
     "drawn_regions",
     "is_picture",
     "is_regions_layer_of",
@@ -35,6 +37,8 @@ __all__ = [
     "new_lines_layer",
     "new_regions_layer",
     "pixel_geometry",
+    "place_of_region",
+    "region_number",
     "set_pixel_size",
     "show_lines",
     "shown_picture",
@@ -48,9 +52,13 @@ _LUMINANCE = (0.2126, 0.7152, 0.0722)
 _DECIMALS_PX = 4
 """Corners are rounded to this: napari's own transforms leave the edges of an upright rectangle off by rounding errors."""
 
+_REGION_SHAPES = ("rectangle", "ellipse", "polygon")
+
 _NEW_SHAPE = {"id": 0, "region": "", "label": ""}
 
 REGION_COLOURS = ("#E69F00", "#56B4E9", "#009E73", "#CC79A7", "#F0E442", "#D55E00")
+
+LINE_COLOUR = "#FFFFFF"
 
 
 # --- pictures ------------------------------------------------------------------------------------------------------
@@ -234,7 +242,7 @@ def drawn_regions(layer: Shapes, picture: Image) -> list[DrawnRegion]:
     same_place = _lie_alike(layer, picture)
     regions = []
     for place, (corners, kind) in enumerate(zip(layer.data, layer.shape_type, strict=True)):
-        if kind not in ("rectangle", "ellipse", "polygon"):
+        if kind not in _REGION_SHAPES:
             continue
         points = np.asarray(corners, dtype=float)[:, -2:]
         if not same_place:
@@ -255,14 +263,42 @@ def _numbers(layer: Shapes) -> list[int]:
         column = list(layer.features["id"])
         given = [int(v) if v == v and v is not None else 0 for v in column][: layer.nshapes]
         given += [0] * (layer.nshapes - len(given))
+    is_region = [kind in _REGION_SHAPES for kind in layer.shape_type]
     following = itertools.count(max([*given, int(layer.metadata.get(METADATA_KEY, {}).get("last id", 0))]) + 1)
     seen: set[int] = set()
     numbers = []
-    for number in given:
+    for number, counts in zip(given, is_region, strict=True):
+        if not counts:
+            # a line is no region and takes no number away from them
+            numbers.append(0)
+            continue
         number = next(following) if number <= 0 or number in seen else number
         seen.add(number)
         numbers.append(number)
     return numbers
+
+
+def region_number(layer: Shapes, place: int) -> int:
+    """Return the number of the region at a place among the shapes; 0 for a line."""
+    numbers = _numbers(layer)
+    return numbers[place] if place < len(numbers) else 0
+
+
+def place_of_region(layer: Shapes, number: int) -> int:
+    """Return the place of a region among the shapes."""
+    return _numbers(layer).index(number)
+
+
+def drawn_line(layer: Shapes, picture: Image) -> Line | None:
+    """Return the line drawn last on a layer, in pixels of a picture; None without one."""
+    places = [place for place, kind in enumerate(layer.shape_type) if kind == "line"]
+    if not places:
+        return None
+    ends = np.asarray(layer.data[places[-1]], dtype=float)[:, -2:]
+    if not _lie_alike(layer, picture):
+        ends = _in_picture(ends, layer, picture)
+    (r0, c0), (r1, c1) = np.round(ends, _DECIMALS_PX).tolist()
+    return (r0, c0), (r1, c1)
 
 
 def _outline(points: NDArray[np.float64], kind: str) -> tuple[tuple[tuple[float, float], ...], RegionKind]:
@@ -327,7 +363,7 @@ def name_regions(layer: Shapes, regions: Sequence[DrawnRegion], labels: dict[int
         layer.metadata[METADATA_KEY]["last id"] = max(
             [int(layer.metadata[METADATA_KEY].get("last id", 0)), *numbers], default=0
         )
-        colours = [REGION_COLOURS[(number - 1) % len(REGION_COLOURS)] for number in numbers]
+        colours = [REGION_COLOURS[(n - 1) % len(REGION_COLOURS)] if n else LINE_COLOUR for n in numbers]
         if colours:
             layer.edge_color = colours
     following = int(layer.metadata[METADATA_KEY].get("last id", 0))

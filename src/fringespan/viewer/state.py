@@ -19,6 +19,7 @@ from fringespan.exceptions import FringespanError
 from fringespan.measurement import Measurement, measure, recalibrated
 from fringespan.micrograph import Micrograph
 from fringespan.region import Region, RegionKind
+from fringespan.viewer.line_angles import Line
 
 __all__ = ["Calibration", "DrawnRegion", "Job", "MeasuredRegion", "MeasuringState", "Outcome", "Unit", "carry_out"]
 
@@ -158,6 +159,7 @@ class _Sheet:
     regions: dict[int, MeasuredRegion] = field(default_factory=dict)
     current: int | None = None
     peak: int | None = None
+    line: Line | None = None
 
 
 class MeasuringState:
@@ -173,6 +175,8 @@ class MeasuringState:
         A region has a new outline, result or problem.
     peak_selected
         Another peak of the current region is selected.
+    line_changed
+        The line that angles are measured to was drawn, moved or removed.
     unit_changed
     work_wanted
         `next_job` has something to do.
@@ -184,6 +188,7 @@ class MeasuringState:
     regions_changed = Signal()
     region_measured = Signal(int)
     peak_selected = Signal()
+    line_changed = Signal()
     unit_changed = Signal()
     work_wanted = Signal()
     complained = Signal(str)
@@ -379,6 +384,17 @@ class MeasuringState:
         keys = list(sheet.regions)
         place = keys.index(sheet.current) if sheet.current in keys else -1
         self.select_region(keys[(place + step) % len(keys)])
+
+    @property
+    def line(self) -> Line | None:
+        """The line on the shown picture that angles are measured to."""
+        return None if self._sheet is None else self._sheet.line
+
+    def set_line(self, line: Line | None) -> None:
+        """Measure angles to another line, or to none."""
+        if self._sheet is not None and line != self._sheet.line:
+            self._sheet.line = line
+            self.line_changed.emit()
 
     # --- peaks ------------------------------------------------------------------------------------------------------
 

@@ -14,6 +14,7 @@ from fringespan.measurement import Measurement
 from fringespan.micrograph import Micrograph
 from fringespan.spacings import Peak
 from fringespan.uncertainty import value_text
+from fringespan.viewer.line_angles import Line, planes_to_line_deg
 
 if TYPE_CHECKING:
     from fringespan.viewer.state import MeasuredRegion, Unit
@@ -193,7 +194,7 @@ def caution_words(measurement: Measurement) -> list[tuple[Caution, str]]:
     ]
 
 
-def table_text(region: MeasuredRegion, unit: Unit) -> str:
+def table_text(region: MeasuredRegion, unit: Unit, line: Line | None = None) -> str:
     """Return the spacings and angles of a region as text with tabs, as a spreadsheet takes it: numbers in full."""
     measurement = region.measurement
     if measurement is None:
@@ -201,7 +202,8 @@ def table_text(region: MeasuredRegion, unit: Unit) -> str:
     symbol, factor = unit_symbol(measurement.micrograph, unit), _PER_NM[unit]
     in_nm = measurement.micrograph.pixel_size_nm is not None
     heads = ["peak", f"d ({symbol})", f"u(d) ({symbol})", f"u noise ({symbol})", f"u crystal ({symbol})"]
-    heads += ["direction (deg)", "u(direction) (deg)", "S/N", "visibility", "lattice", "origin", "remark"]
+    heads += ["direction (deg)", "u(direction) (deg)", "planes to line (deg)"]
+    heads += ["S/N", "visibility", "lattice", "origin", "remark"]
     lines = [f"{measurement.micrograph.name}\t{region.drawn.name}", "\t".join(heads)]
     for number, peak in enumerate(measurement.peaks, start=1):
         if in_nm:
@@ -212,7 +214,9 @@ def table_text(region: MeasuredRegion, unit: Unit) -> str:
             fit = peak.period_px**2 * math.sqrt(max(0.0, float(along @ peak.g_covariance_per_px2 @ along)))
             lengths = [peak.period_px, None, fit, None]
         index = "" if peak.lattice_index is None else "{} {}".format(*peak.lattice_index)
+        to_line = None if line is None else planes_to_line_deg(peak, line, measurement.micrograph)
         cells: list[object] = [number, *lengths, peak.direction_deg, peak.direction_uncertainty_deg]
+        cells.append(None if to_line is None else to_line[0])
         cells += [peak.signal_to_noise, peak.visibility, index, peak.origin, one_line(peak.withheld or "")]
         lines.append("\t".join("" if c is None else f"{c:.7g}" if isinstance(c, float) else str(c) for c in cells))
     if measurement.angles:

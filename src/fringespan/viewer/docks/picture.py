@@ -152,7 +152,11 @@ class PictureDock(Dock):
             "Rectangle": (partial(desk.draw, "rectangle"), "Draw a rectangle inside one grain"),
             "Ellipse": (partial(desk.draw, "ellipse"), "Draw an ellipse inside one grain"),
             "Polygon": (partial(desk.draw, "polygon"), "Draw a polygon: click its corners, double click the last"),
-            "Whole picture": (desk.add_whole_picture, "Measure everything in the picture"),
+            "Whole": (desk.add_whole_picture, "Measure the whole picture"),
+            "Line": (
+                partial(desk.draw, "line"),
+                "Draw an interface, a facet, a direction: the table shows angles to it",
+            ),
             "Move": (desk.select_and_move, "Move, resize and turn regions"),
             "Remove": (desk.remove_current, "Remove the current region"),
         }
@@ -161,7 +165,7 @@ class PictureDock(Dock):
             button.setToolTip(tip)
             button.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Fixed)
             button.clicked.connect(partial(_ignoring_checked, command))
-            grid.addWidget(button, place // 3, place % 3)
+            grid.addWidget(button, place // 4, place % 4)
             self.tools[name] = button
         return grid
 

@@ -24,8 +24,8 @@ from qtpy.QtWidgets import (
 )
 
 from fringespan.viewer.docks.dock import Dock
-from fringespan.viewer.docks.wrapped_label import WrappedLabel
 from fringespan.viewer.docks.spacings_model import COLUMNS, PARTS_ROLE, SORT_ROLE, SpacingsModel
+from fringespan.viewer.docks.wrapped_label import WrappedLabel
 from fringespan.viewer.state import MeasuredRegion, Unit
 from fringespan.viewer.wording import (
     GRAVITY_WORDS,
@@ -83,6 +83,7 @@ class SpacingsDock(Dock):
             (state.region_measured, self._on_measured),
             (state.peak_selected, self._choose),
             (state.unit_changed, self._on_unit),
+            (state.line_changed, self._on_line),
         )
         self._show()
 
@@ -113,6 +114,7 @@ class SpacingsDock(Dock):
         header.customContextMenuRequested.connect(self._choose_columns)
         for name in _HIDDEN_AT_FIRST:
             self.table.setColumnHidden(COLUMNS.index(name), True)
+        self.table.setColumnHidden(COLUMNS.index("line"), self._state.line is None)
         self.table.selectionModel().currentRowChanged.connect(self._on_row)
         shortcut = QShortcut(QKeySequence(QKeySequence.StandardKey.Copy), self)
         shortcut.setContext(Qt.ShortcutContext.WidgetWithChildrenShortcut)
@@ -141,7 +143,7 @@ class SpacingsDock(Dock):
         """Put spacings and angles of the current region on the clipboard."""
         current = self._state.current
         if current is not None and current.measurement is not None:
-            QGuiApplication.clipboard().setText(table_text(current, self._state.unit))
+            QGuiApplication.clipboard().setText(table_text(current, self._state.unit, self._state.line))
 
     def _set_unit(self, index: int) -> None:
         self._state.unit = cast("Unit", get_args(Unit)[index])
@@ -176,6 +178,10 @@ class SpacingsDock(Dock):
     def _on_unit(self) -> None:
         self.unit.setCurrentIndex(get_args(Unit).index(self._state.unit))
         self._show()
+
+    def _on_line(self) -> None:
+        self.table.setColumnHidden(COLUMNS.index("line"), self._state.line is None)
+        self.model.refresh()
 
     def _on_measured(self, region_id: int) -> None:
         current = self._state.current

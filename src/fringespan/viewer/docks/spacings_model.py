@@ -8,6 +8,7 @@ from qtpy.QtCore import QAbstractTableModel, QModelIndex, QObject, Qt
 
 from fringespan.measurement import Measurement
 from fringespan.spacings import Peak
+from fringespan.viewer.line_angles import planes_to_line_deg
 from fringespan.viewer.state import MeasuringState
 from fringespan.viewer.wording import (
     GRAVITY_WORDS,
@@ -20,7 +21,19 @@ from fringespan.viewer.wording import (
 
 __all__ = ["COLUMNS", "PARTS_ROLE", "SORT_ROLE", "SpacingsModel"]
 
-COLUMNS = ("number", "d", "parts", "direction", "angle", "S/N", "lattice", "d lattice", "visibility", "cautions")
+COLUMNS = (
+    "number",
+    "d",
+    "parts",
+    "direction",
+    "angle",
+    "line",
+    "S/N",
+    "lattice",
+    "d lattice",
+    "visibility",
+    "cautions",
+)
 
 SORT_ROLE = int(Qt.ItemDataRole.UserRole) + 1
 PARTS_ROLE = int(Qt.ItemDataRole.UserRole) + 2
@@ -93,6 +106,7 @@ class SpacingsModel(QAbstractTableModel):
             "parts": "What the uncertainty consists of: noise, crystal, pixel size",
             "direction": "Direction of the spacing, counter-clockwise from the right",
             "angle": "Angle to the selected (else the strongest) set of fringes",
+            "line": "Angle of the planes (0: the fringes run along it) to the drawn line, itself taken as exact",
             "S/N": "Signal to noise",
             "lattice": "Indices in the common lattice",
             "d lattice": "Spacing from the common lattice",
@@ -114,6 +128,7 @@ class SpacingsModel(QAbstractTableModel):
             "parts": "u",
             "direction": "dir. (°)",
             "angle": f"to {self._reference_row() + 1} (°)" if self._rows else "angle (°)",
+            "line": "to line (°)",
             "S/N": "S/N",
             "lattice": "lattice",
             "d lattice": f"d lattice ({symbol})",
@@ -150,6 +165,11 @@ class SpacingsModel(QAbstractTableModel):
         found = [a for a in self._measurement.angles if set(a.peaks) == pair]
         return (found[0].angle_deg, found[0].angle_uncertainty_deg) if found and len(pair) == 2 else None
 
+    def _line_angle(self, peak: Peak) -> tuple[float, float] | None:
+        assert self._measurement is not None
+        line = self._state.line
+        return None if line is None else planes_to_line_deg(peak, line, self._measurement.micrograph)
+
     def _text(self, row: int, peak: Peak, name: str) -> str:
         unit = self._state.unit
         if name == "number":
@@ -160,6 +180,9 @@ class SpacingsModel(QAbstractTableModel):
             return angle_text(peak.direction_deg, peak.direction_uncertainty_deg)
         if name == "angle":
             angle = self._angle(row)
+            return "" if angle is None else angle_text(*angle)
+        if name == "line":
+            angle = self._line_angle(peak)
             return "" if angle is None else angle_text(*angle)
         if name == "S/N":
             return f"{peak.signal_to_noise:.0f}"
@@ -181,6 +204,7 @@ class SpacingsModel(QAbstractTableModel):
             "parts": _relative(peak),
             "direction": peak.direction_deg,
             "angle": -1.0 if angle is None else angle[0],
+            "line": None if (to_line := self._line_angle(peak)) is None else to_line[0],
             "S/N": peak.signal_to_noise,
             "lattice": None if peak.lattice_index is None else 100.0 * peak.lattice_index[0] + peak.lattice_index[1],
             "d lattice": peak.d_lattice_nm,
