@@ -174,18 +174,6 @@ class Desk:
         self._regions.selected_data = {place}
         self._regions.remove_selected()
 
-    def move_current(self, rows: float, columns: float) -> None:
-        """Move the current region by pixels."""
-        current = self.state.current
-        if current is None or self._regions is None or self._picture is None:
-            return
-        place = place_of_region(self._regions, current.drawn.id)
-        data, kinds = list(self._regions.data), list(self._regions.shape_type)
-        data[place] = np.add(data[place], [rows, columns])
-        with self._quietly():
-            self._regions.data = list(zip(data, kinds, strict=True))
-        self._read_regions()
-
     def recalibrate(self, calibration: Calibration) -> None:
         """Change what stands beside the pixels, and the scale of the picture's layers with it.
 

@@ -126,6 +126,8 @@ class PictureDock(Dock):
         self.region_name.setToolTip("Name of the region; type to change it")
         self.region_name.editingFinished.connect(self._rename)
         self.region_place = QLabel()
+        # the mark of a running measurement must not move what is beside it
+        self.region_place.setMinimumWidth(self.fontMetrics().horizontalAdvance("00 of 00 …"))
         line = QHBoxLayout()
         line.setSpacing(3)
         for widget, stretch in (
@@ -296,9 +298,9 @@ class PictureDock(Dock):
         if not self.region_name.hasFocus():
             self.region_name.setText(current.drawn.name)
         place = [region.drawn.id for region in regions].index(current.drawn.id) + 1
-        self.region_place.setText(f"{place} of {len(regions)}")
-        words = region_words(current, micrograph)
-        self.region_facts.setText(f"{words} · measuring ..." if current.is_pending else words)
+        self.region_place.setText(f"{place} of {len(regions)} {'…' if current.is_pending else ''}")
+        self.region_place.setToolTip("A newer outline is being measured." if current.is_pending else "")
+        self.region_facts.setText(region_words(current, micrograph))
 
 
 def _ignoring_checked(command: Callable[[], None], _checked: bool = False) -> None:

@@ -35,6 +35,6 @@ class WrappedLabel(QLabel):
             self._claim_height()
 
     def _claim_height(self) -> None:
-        height = self.heightForWidth(self.width()) if self.text() else 0
-        if height >= 0 and height != self.maximumHeight():
-            self.setFixedHeight(height)
+        # Qt never asks for less than the height that is claimed already
+        self.setMinimumHeight(0)
+        self.setFixedHeight(max(0, self.heightForWidth(self.width())) if self.text() else 0)
