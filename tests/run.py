@@ -20,6 +20,7 @@ import shutil
 import subprocess
 import sys
 import venv
+from ctypes.util import find_library
 from pathlib import Path
 
 OLDEST_PYTHON = (3, 11)
@@ -31,6 +32,33 @@ STAMP = ENVIRONMENT / "installed-for"
 # is used, and its answer told
 SYSTEM_PACKAGES = {
     f"python{sys.version_info.major}.{sys.version_info.minor}-venv": lambda: _has_module("ensurepip"),
+    **(
+        {
+            # the windows of the viewer are tested on a screen in memory, which Qt and OpenGL must find what they need for
+            "xvfb": lambda: shutil.which("Xvfb") is not None,
+            "xauth": lambda: shutil.which("xauth") is not None,
+            **{
+                package: lambda library=library: _has_library(library)
+                for package, library in {
+                    "libegl1": "EGL",
+                    "libgl1": "GL",
+                    "libdbus-1-3": "dbus-1",
+                    "libfontconfig1": "fontconfig",
+                    "libxkbcommon-x11-0": "xkbcommon-x11",
+                    "libx11-xcb1": "X11-xcb",
+                    "libxcb-cursor0": "xcb-cursor",
+                    "libxcb-icccm4": "xcb-icccm",
+                    "libxcb-keysyms1": "xcb-keysyms",
+                    "libxcb-shape0": "xcb-shape",
+                }.items()
+            },
+            "libgl1-mesa-dri": lambda: (
+                any(Path("/usr/lib").rglob("swrast_dri.so")) or any(Path("/usr/lib").rglob("libgallium*.so"))
+            ),
+        }
+        if sys.platform == "linux"
+        else {}
+    ),
 }
 
 
@@ -98,6 +126,10 @@ def _environment() -> Path:
 def _has_module(name: str) -> bool:
     # asked of a Python of its own: this one may have been changed by its surroundings
     return subprocess.run([sys.executable, "-c", f"import {name}"], capture_output=True, check=False).returncode == 0
+
+
+def _has_library(name: str) -> bool:
+    return find_library(name) is not None
 
 
 def _install_command(packages: list[str]) -> list[str] | None:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,7 +27,29 @@ from fringespan.settings import MeasurementSettings
 from fringespan.spacings import PairAngle, Peak, Scale, diagonal_blocks, pair_angles, spacings_of
 from fringespan.spectrum import PowerSpectrum, RegionPixels, power_spectrum, prepare_pixels
 
-__all__ = ["Measurement", "measure"]
+__all__ = ["Measurement", "RegionInPixels", "measure", "recalibrated"]
+
+
+@dataclass(frozen=True, eq=False, slots=True, kw_only=True)
+class RegionInPixels:
+    """What a region shows before any unit: kept, so that another pixel size or voltage costs no new transform.
+
+    Attributes
+    ----------
+    placed : PlacedRegion
+    values : ndarray, shape (rows, columns)
+        Pixels of the region's rectangle.
+    pixels : RegionPixels
+    signs : SpectrumSigns
+    found : CrystalFringes
+        With frequencies in cycles per pixel.
+    """
+
+    placed: PlacedRegion
+    values: NDArray[np.generic]
+    pixels: RegionPixels
+    signs: SpectrumSigns
+    found: CrystalFringes
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -53,6 +75,8 @@ class Measurement:
         Power spectrum that the peaks were found in.
     cautions : tuple of Caution
         About the region as a whole, gravest first.
+    in_pixels : RegionInPixels or None
+        What `recalibrated` starts from.
     """
 
     micrograph: Micrograph
@@ -65,6 +89,7 @@ class Measurement:
     crystal_extent_nm: tuple[float, float] | None
     spectrum: PowerSpectrum
     cautions: tuple[Caution, ...]
+    in_pixels: RegionInPixels | None = field(default=None, repr=False)
 
 
 _DEFAULT = MeasurementSettings()
@@ -101,11 +126,72 @@ def measure(
         raise RegionError(
             f"region {region.name!r}: all its pixels are equal; draw it where the picture shows something"
         )
+    found = _find(micrograph, pixels, spectrum, settings)
+    signs = spectrum_signs(spectrum)
+    in_pixels = RegionInPixels(placed=placed, values=values, pixels=pixels, signs=signs, found=found)
+    return _in_units(micrograph, region, settings, spectrum, in_pixels)
+
+
+def recalibrated(measurement: Measurement, micrograph: Micrograph) -> Measurement:
+    """Return a measurement for other beam values or another size of the same pixels.
+
+    Nothing is transformed again. Where the pixels keep their shape and no lens is known, what was found in pixels stays
+    and is told in the new units; else the fringes are sought again in the spectrum.
+
+    Parameters
+    ----------
+    measurement : Measurement
+        As `measure` returned it.
+    micrograph : Micrograph
+        The same pixels with other values beside them.
+
+    Returns
+    -------
+    Measurement
+        Equal to that of `measure`; where fringes are sought again, to within a small fraction of the uncertainties.
+
+    Raises
+    ------
+    RegionError
+        If the measurement is not of these pixels, or was not made by `measure`.
+    """
+    before, in_pixels = measurement.micrograph, measurement.in_pixels
+    if in_pixels is None or micrograph.pixels is not before.pixels:
+        raise RegionError(
+            f"region {measurement.region.name!r}: only a measurement of the same pixels can be told in other units; "
+            "measure it again"
+        )
+    settings, spectrum = measurement.settings, measurement.spectrum
+    old, new = before.pixel_size_nm or (1.0, 1.0), micrograph.pixel_size_nm or (1.0, 1.0)
+    same_shape = math.isclose(new[0] * old[1], new[1] * old[0], rel_tol=1e-12)
+    if same_shape and _lens(before) is None and _lens(micrograph) is None:
+        factor, extent = new[0] / old[0], in_pixels.found.extent
+        scaled = None if extent is None else (extent[0] * factor, extent[1] * factor)
+        found = replace(in_pixels.found, extent=scaled)
+    else:
+        found = _find(micrograph, in_pixels.pixels, spectrum, settings)
+    return _in_units(micrograph, measurement.region, settings, spectrum, replace(in_pixels, found=found))
+
+
+def _find(
+    micrograph: Micrograph, pixels: RegionPixels, spectrum: PowerSpectrum, settings: MeasurementSettings
+) -> CrystalFringes:
     lens = _lens(micrograph)
     law = None if lens is None else _delocalisation(lens)
-    found = find_crystal_fringes(pixels, spectrum, settings, micrograph.pixel_size_nm or (1.0, 1.0), law)
-    scale = Scale.of(micrograph)
-    signs = spectrum_signs(spectrum)
+    return find_crystal_fringes(pixels, spectrum, settings, micrograph.pixel_size_nm or (1.0, 1.0), law)
+
+
+def _in_units(
+    micrograph: Micrograph,
+    region: Region,
+    settings: MeasurementSettings,
+    spectrum: PowerSpectrum,
+    in_pixels: RegionInPixels,
+) -> Measurement:
+    """Tell what was found in pixels in the units of the picture, and judge it."""
+    placed, values, pixels = in_pixels.placed, in_pixels.values, in_pixels.pixels
+    signs, found = in_pixels.signs, in_pixels.found
+    lens, scale = _lens(micrograph), Scale.of(micrograph)
     peaks, angles, effects = _peaks(micrograph, placed, pixels, found, scale, signs, lens)
     lattice = None
     if found.lattice is not None:
@@ -128,6 +214,7 @@ def measure(
                 *region_cautions(micrograph, settings, values, pixels, spectrum, signs, found, peaks, lens, effects),
             ]
         ),
+        in_pixels=in_pixels,
     )
 
 

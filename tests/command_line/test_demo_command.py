@@ -1,4 +1,4 @@
-"""`fringespan demo`: a right table at the first try, in a folder of its own, and no window."""
+"""`fringespan demo`: a right table at the first try, in a folder of its own, and a window only when asked for."""
 
 import json
 
@@ -59,7 +59,18 @@ def test_the_folder_has_a_name_of_its_own_by_default(run, tmp_path, monkeypatch)
     assert [p.name for p in tmp_path.iterdir()] == ["fringespan-demo"]
 
 
-def test_no_viewer_is_promised_that_is_not_there(run, tmp_path):
+def test_without_the_viewer_it_says_what_to_install_before_it_writes(run, tmp_path, monkeypatch):
+    monkeypatch.setattr("fringespan.command_line.view.find_spec", lambda name: None)
     result = run("demo", "--out", tmp_path / "demo", "--view")
-    assert result.exit_code == 2
+    assert result.exit_code == 1
+    assert 'pip install "fringespan[all]"' in result.stderr
     assert not list(tmp_path.iterdir())
+
+
+def test_the_viewer_opens_on_the_picture_that_was_written(run, tmp_path, monkeypatch):
+    shown = []
+    monkeypatch.setattr("fringespan.command_line.demo.show", lambda *arguments: shown.append(arguments))
+    assert run("demo", "--out", tmp_path / "demo", "--view").exit_code == 0
+    ((micrograph, regions, path),) = shown
+    assert path == str(micrograph.path) == str(tmp_path / "demo" / "two_grains.ome.tif")
+    assert [region.name for region in regions] == ["gold", "ceria"]

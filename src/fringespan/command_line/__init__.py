@@ -27,6 +27,7 @@ _COMMANDS = {
     "log": "List, plot, export and import the log of magnification checks.",
     "expect": "List the reflections that a phase would show.",
     "rank": "Rank phases for typed spacings and angles.",
+    "view": "Open a picture in napari and measure with the mouse.",
     "beam": "Show wavelength, scattering angles and contrast transfer.",
 }
 

@@ -7,6 +7,8 @@ from pathlib import Path
 
 import click
 
+from fringespan.command_line.view import refuse_without_viewer, show
+
 __all__ = ["demo"]
 
 _PICTURE = "two_grains"
@@ -35,10 +37,7 @@ Examples:
 def demo(out: str, view: bool) -> None:
     """Measure the two grains of the sample picture."""
     if view:
-        raise click.UsageError(
-            "--view needs the napari viewer, which this version does not have; leave it out",
-            click.get_current_context(),
-        )
+        refuse_without_viewer()
     from fringespan.command_line.printing import print_lines, text_width
     from fringespan.export.figure import write_figure
     from fringespan.export.measurement_figure import measurement_figure
@@ -56,7 +55,8 @@ def demo(out: str, view: bool) -> None:
     picture = folder / source.name
     shutil.copyfile(source, picture)
     micrograph = read(picture, pixel_size_relative_uncertainty=_PIXEL_SIZE_UNCERTAINTY, voltage_kv=_VOLTAGE_KV)
-    measurements = [measure(micrograph, region) for region in read_regions(truth)]
+    regions = read_regions(truth)
+    measurements = [measure(micrograph, region) for region in regions]
     record = record_of(measurements)
     written = {
         picture: "the picture",
@@ -83,6 +83,8 @@ def demo(out: str, view: bool) -> None:
             Line(f"  fringespan measure {picture} --regions {folder / 'record.json'}"),
         ]
     )
+    if view:
+        show(micrograph, regions, str(picture))
 
 
 def _new_folder(wanted: Path) -> Path:

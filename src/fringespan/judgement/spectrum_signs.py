@@ -99,10 +99,10 @@ def _places(shape: tuple[int, int]) -> NDArray[np.int32]:
     column = np.arange(columns)[None] / nx
     radius = np.hypot(row, column)
     off_axes = (np.abs(row) * ny > 3.5) & (column * nx > 3.5)
-    groups = [
-        np.flatnonzero(((np.abs(row) > 0.43) & (column > 0.43)).ravel()),
-        np.flatnonzero((off_axes & (radius > 0.08) & (radius < 0.2)).ravel()),
-    ]
+    middle = (radius > 0.08) & (radius < 0.2)
+    # the spectrum of the smallest regions has no bin there that is off the axes
+    middle = middle & off_axes if (middle & off_axes).any() else middle
+    groups = [np.flatnonzero(((np.abs(row) > 0.43) & (column > 0.43)).ravel()), np.flatnonzero(middle.ravel())]
     beside = 12
     along_rows = np.arange(8, ny - 7)
     along_columns = np.arange(8, columns - 1)
