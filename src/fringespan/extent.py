@@ -228,6 +228,9 @@ def outline(fields: FringeField, mask: NDArray[np.bool_]) -> NDArray[np.float64]
     y = np.concatenate([[fields.y[0] - step_y], fields.y, [fields.y[-1] + step_y]])
     x = np.concatenate([[fields.x[0] - step_x], fields.x, [fields.x[-1] + step_x]])
     lines = contourpy.contour_generator(x, y, fine).lines(0.5)
+    if not lines:
+        # no cell, or one that smoothing takes away: the grid's own rectangle
+        return np.array([(y[0], x[0]), (y[0], x[-1]), (y[-1], x[-1]), (y[-1], x[0])])
     longest = max((np.asarray(line) for line in lines), key=lambda line: line.shape[0])
     return np.asarray(longest[:-1, ::-1], dtype=float)
 
