@@ -32,6 +32,9 @@ STAMP = ENVIRONMENT / "installed-for"
 # is used, and its answer told
 SYSTEM_PACKAGES = {
     f"python{sys.version_info.major}.{sys.version_info.minor}-venv": lambda: _has_module("ensurepip"),
+}
+
+VIEWER_PACKAGES = {
     **(
         {
             # the windows of the viewer are tested on a screen in memory, which Qt and OpenGL must find what they need for
@@ -68,7 +71,8 @@ def main() -> int:
         found = ".".join(map(str, sys.version_info[:2]))
         return _stop(f"Python {'.'.join(map(str, OLDEST_PYTHON))} or newer is needed, this is {found}")
     options, for_pytest = _arguments()
-    missing = [package for package, is_there in SYSTEM_PACKAGES.items() if not is_there()]
+    wanted = {**SYSTEM_PACKAGES, **(VIEWER_PACKAGES if options.viewer else {})}
+    missing = [package for package, is_there in wanted.items() if not is_there()]
     if missing:
         command = _install_command(missing)
         if command is None:
@@ -83,7 +87,7 @@ def main() -> int:
             if done.returncode:
                 return _stop(f"apt-get {step[0]} failed with status {done.returncode}")
     try:
-        python = _environment()
+        python = _environment("test-viewer" if options.viewer else "test")
     except subprocess.CalledProcessError as failure:
         return _stop(f"the environment could not be made: {' '.join(map(str, failure.cmd))} failed")
     # the names of the markers are those of pyproject.toml
@@ -101,23 +105,26 @@ def _arguments() -> tuple[argparse.Namespace, list[str]]:
     )
     parser.add_argument("--slow", action="store_true", help="run the slow tests too")
     parser.add_argument(
+        "--viewer", action="store_true", help="install napari with Qt and test the viewer too, on a screen in memory"
+    )
+    parser.add_argument(
         "--install-system-packages", action="store_true", help="install missing Debian packages (needs root or sudo)"
     )
     options, rest = parser.parse_known_args()
     return options, [argument for i, argument in enumerate(rest) if argument != "--" or "--" in rest[:i]]
 
 
-def _environment() -> Path:
+def _environment(extra: str) -> Path:
     """Make the environment, or bring it up to date, and return its Python."""
     python = ENVIRONMENT / ("Scripts/python.exe" if os.name == "nt" else "bin/python")
     # the code itself is used in place; only these decide what must be installed
-    wanted = hashlib.sha256((CHECKOUT / "pyproject.toml").read_bytes() + sys.version.encode()).hexdigest()
+    wanted = hashlib.sha256((CHECKOUT / "pyproject.toml").read_bytes() + f"{sys.version} {extra}".encode()).hexdigest()
     if python.exists() and STAMP.exists() and STAMP.read_text() == wanted:
         return python
     print(f"Making {ENVIRONMENT} (once; takes a minute or two) ...", file=sys.stderr, flush=True)
     # the Python that made an environment may be another one, or gone
     venv.EnvBuilder(with_pip=True, clear=True).create(ENVIRONMENT)
-    install = [python, "-m", "pip", "install", "--quiet", "--disable-pip-version-check", "--editable", ".[test]"]
+    install = [python, "-m", "pip", "install", "--quiet", "--disable-pip-version-check", "--editable", f".[{extra}]"]
     subprocess.run(install, cwd=CHECKOUT, check=True)
     STAMP.write_text(wanted)
     return python

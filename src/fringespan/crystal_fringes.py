@@ -22,7 +22,7 @@ from fringespan.lattice import LatticeFit, find_lattice, unseen_lattice_points
 from fringespan.noise import RingBackground, ring_background, rings_at
 from fringespan.peaks.demodulation import demodulate
 from fringespan.peaks.detection import density_at, matched_ratio_at, tapered_maximum, waves_removed
-from fringespan.peaks.fringes import Fringes, find_fringes
+from fringespan.peaks.fringes import Fringes, close_pairs, find_fringes
 from fringespan.peaks.joint_fit import JointFit, fit_jointly, solve_waves
 from fringespan.peaks.misfit import MISFIT_LIMIT
 from fringespan.region import Footprint
@@ -36,7 +36,7 @@ DelocalisationLaw = Callable[[NDArray[np.float64]], NDArray[np.float64]]
 """Signed delocalisation in nm as a function of spatial frequency in 1/nm."""
 
 _CLEAR = 60.0
-"""Power ratio from which a misfit, or the extent of the fringes, can be believed."""
+"""Power ratio of all that the fringes hold from which a misfit, or their extent, can be believed."""
 
 _READABLE = 150.0
 """Power ratio from which the fringes' own phase and plateau are read; weaker ones take those of the crystal."""
@@ -165,8 +165,10 @@ def find_crystal_fringes(
     aspect = round(pixel_size[1] / pixel_size[0], 3)
     whole = _scene(pixels, spectrum, settings, aspect, (0, 0))
     scene, others, share = whole, np.empty((0, 2)), 1.0
-    clear = whole.fringes.fit.power_ratio > _CLEAR
-    uneven = bool((clear & (whole.fringes.residuals.misfit > MISFIT_LIMIT)).any())
+    misfit = whole.fringes.residuals.misfit
+    # what a single wave leaves over is power of the fringes, too: the misfit is the mean of twelve projections
+    clear = whole.fringes.fit.power_ratio + 12 * (misfit - 1) > _CLEAR
+    uneven = bool((clear & (misfit > MISFIT_LIMIT)).any())
     if uneven:
         fields, strength = _strongest_fields(whole, clear)
         mask = crystal_mask(fields, strength, 0.35)
@@ -353,6 +355,7 @@ def _centred(scene: _Scene) -> _Scene:
     top = np.array([tapered_maximum(spectrum, f) for f in fit.frequency]).reshape(-1, 2)
     away = np.hypot(*((top - fit.frequency) * bins).T)
     moved = (scene.fringes.residuals.misfit > MISFIT_LIMIT) & (fit.power_ratio > _CLEAR) & (away > _RUNAWAY_BINS)
+    moved &= ~close_pairs(scene.footprint, scene.fringes)
     if not moved.any():
         return scene
     frequency = np.where(moved[:, None], top, fit.frequency)
@@ -385,7 +388,9 @@ def _assembled(
         width = smoothing_width_px(scene.footprint.count, fit.power_ratio, fit.frequency)
         fields = fringe_fields(scene.footprint, fit.demodulation, fit.frequency, width)
         crystal = _crystal_fit(scene, fields, size)
-        own = (misfit > MISFIT_LIMIT) | (fit.power_ratio > _READABLE)
+        alone = ~close_pairs(scene.footprint, scene.fringes)
+        readable = (fit.power_ratio > _READABLE) & alone
+        own = ((misfit > MISFIT_LIMIT) & alone) | readable
         own &= (crystal.share < 0.95) | (crystal.phase_rms > 0.1) | (crystal.plateau_loss > 0.1)
         frequency[own] += (crystal.shift * size)[own]
         amplitude[own] = crystal.amplitude[own]
@@ -393,7 +398,6 @@ def _assembled(
             covariance[2 * k : 2 * k + 2] *= crystal.efficiency[k]
             covariance[:, 2 * k : 2 * k + 2] *= crystal.efficiency[k]
             covariance[2 * k : 2 * k + 2, 2 * k : 2 * k + 2] += crystal.bend[k] * np.outer(size, size)
-        readable = fit.power_ratio > _READABLE
         withheld = [reason if r else None for reason, r in zip(why_broken(crystal), readable, strict=True)]
         crystal = _levelled(crystal, readable, fit.power_ratio)
     moved = replace(scene, fringes=replace(scene.fringes, fit=replace(fit, frequency=frequency, covariance=covariance)))

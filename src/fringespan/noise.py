@@ -74,9 +74,10 @@ def _rings(shape: tuple[int, int], aspect: float) -> _Rings:
     samples = np.zeros((len(edges) - 1, _SAMPLES), np.int32)
     counts = np.zeros(len(edges) - 1, np.int32)
     _choose_samples(np.random.default_rng(ny * 65537 + nx), edge, ny, nx, step[0], step[1], samples, counts)
-    kept = counts >= 8
-    samples, counts = samples[kept], counts[kept]
-    middle = ((edge[:-1] + edge[1:]) / 2)[kept]
+    middle = (edge[:-1] + edge[1:]) / 2
+    # a low value by chance makes ghosts; in the corners, unlike in the middle, a ring can be done without
+    kept = counts >= np.where(middle < farthest / 2, 8, 24)
+    samples, counts, middle = samples[kept], counts[kept], middle[kept]
     table = np.arange(int(farthest * _TABLE_STEPS) + 2 * _TABLE_STEPS) / _TABLE_STEPS
     # corners hold few bins: beyond the last well-sampled ring its value goes on
     position = np.interp(np.log(np.maximum(table, 0.5)), np.log(middle), np.arange(len(middle), dtype=float))

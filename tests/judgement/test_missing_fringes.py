@@ -5,6 +5,7 @@ import math
 import numpy as np
 import pytest
 
+import fringespan as fs
 from fringespan.judgement.missing_fringes import NeededFringes, needed_fringes, no_fringe_caution
 from fringespan.measurement import measure
 from fringespan.micrograph import Micrograph
@@ -55,3 +56,16 @@ def test_the_caution_says_what_was_looked_for(pixel_size, mean, dark_level, word
     text = no_fringe_caution(NeededFringes(2.0, 50.0, 1.0, 2.0), pixel_size, mean, dark_level).text
     for word in words:
         assert word in text
+
+
+def test_fringes_that_bend_all_over_are_named_and_noise_is_not():
+    y, x = np.mgrid[:256, :256] - 128.0
+    noise_only = np.random.default_rng(2).standard_normal((256, 256)) + 50
+    # a quarter of concentric fringes: every direction, one spacing of 9 pixels
+    curved = noise_only + 4 * np.cos(2 * np.pi * np.hypot(y + 150, x + 150) / 9) * (
+        np.abs(np.hypot(y + 150, x + 150) - 200) < 40
+    )
+    codes = [c.code for c in fs.measure(fs.Micrograph(curved)).cautions]
+    assert "fringes-bend-all-over" in codes
+    assert "no-fringe-found" not in codes
+    assert "fringes-bend-all-over" not in [c.code for c in fs.measure(fs.Micrograph(noise_only)).cautions]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import gc
+import importlib.util
 import threading
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
@@ -14,6 +15,9 @@ import pytest
 from fringespan.micrograph import Micrograph
 
 NANOMETRES_PER_PX = 0.02
+
+# napari and Qt are an extra: without them there is no viewer to test
+collect_ignore_glob = [] if importlib.util.find_spec("napari") is not None else ["test_*.py"]
 
 
 def two_fringes(shape: tuple[int, int] = (256, 256), *, seed: int = 4, period_px: float = 11.0) -> np.ndarray:

@@ -175,6 +175,8 @@ def _per_cent(
     if value is None:
         return None
     numbers = _one_or_two(value, 0.01)
+    if not all(0 <= n < 1 for n in numbers):
+        raise click.BadParameter(f"it is in per cent, from 0 up to 100, got {value}; leave it out if it is not known")
     return numbers[0] if len(numbers) == 1 else (numbers[0], numbers[1])
 
 

@@ -6,15 +6,19 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from fringespan.cautions import Caution
-from fringespan.noise import ring_background
+from fringespan.noise import ring_background, rings_at
 from fringespan.peaks.detection import detection_threshold
 from fringespan.region import Footprint
 from fringespan.settings import MeasurementSettings
 from fringespan.spectrum import PowerSpectrum
 
-__all__ = ["NeededFringes", "needed_fringes", "no_fringe_caution"]
+__all__ = ["NeededFringes", "arc_or_streak", "needed_fringes", "no_fringe_caution", "strongest_arc"]
+
+_ARC_POWER = 40.0
+"""Power over the rings that no noise reaches: what is as strong and yet no peak is an arc or a streak."""
 
 _NINE_IN_TEN = 0.9
 """By how much the matched filter's amplitude, in units of the noise's, must exceed its limit to pass nine times in ten:
@@ -101,4 +105,55 @@ def no_fringe_caution(
         f"{unit} were looked for; fringes all over the region would have been found with an amplitude of {strength} {of}, "
         "nine times in ten.",
         "Draw the region where you see fringes and as large as they reach, or take the picture with more electrons.",
+    )
+
+
+def strongest_arc(spectrum: PowerSpectrum, footprint: Footprint, aspect: float) -> NDArray[np.float64] | None:
+    """Return where an arc or a streak is strongest in a spectrum without peaks, in cycles per pixel; None if there is none.
+
+    Parameters
+    ----------
+    spectrum : PowerSpectrum
+    footprint : Footprint
+    aspect : float
+        Column pixel size over row pixel size.
+
+    Returns
+    -------
+    ndarray, shape (2,), or None
+    """
+    power = spectrum.power
+    ny = spectrum.shape[0]
+    rows = np.where(np.arange(ny) <= ny // 2, np.arange(ny), np.arange(ny) - ny)
+    place = np.stack(np.broadcast_arrays(rows[:, None], np.arange(power.shape[1])[None]), axis=-1).reshape(-1, 2)
+    share = power.ravel() / rings_at(ring_background(spectrum, aspect), place)
+    bins = place * np.array(footprint.shape) / spectrum.shape
+    # near the origin, and along both axes, uneven thickness and the edges of the picture are as strong
+    share[(np.hypot(bins[:, 0], bins[:, 1]) < 8) | (np.abs(bins).min(axis=1) < 3)] = 0
+    best = int(share.argmax())
+    if share[best] < _ARC_POWER:
+        return None
+    return np.asarray(place[best] / np.array(spectrum.shape), dtype=float)
+
+
+def arc_or_streak(place: NDArray[np.float64], geometry: NDArray[np.float64] | None) -> Caution:
+    """Say that fringes are there, but nowhere near one plane wave over the region.
+
+    Parameters
+    ----------
+    place : ndarray, shape (2,)
+        Strongest place of the arc in cycles per pixel.
+    geometry : ndarray, shape (2, 2), or None
+        nm per pixel.
+    """
+    if geometry is None:
+        about = f"{1 / math.hypot(*place.tolist()):.1f} px"
+    else:
+        about = f"{1 / math.hypot(*(place @ np.linalg.inv(geometry)).tolist()):.2f} nm"
+    return Caution(
+        "fringes-bend-all-over",
+        "warning",
+        f"Strong fringes of about {about} are there, but as an arc or streak of the spectrum, no peak: they bend, or fill "
+        "a small or thin part of the region, so that it has no one spacing and direction.",
+        "Draw a smaller region around a part where they run straight, or use the profile across them.",
     )

@@ -15,7 +15,7 @@ from fringespan.beam import Lens
 from fringespan.cautions import Caution
 from fringespan.crystal_fringes import CrystalFringes
 from fringespan.judgement.lens_effects import LensEffects, defocus_remedy, lens_cautions, off_bragg_caution
-from fringespan.judgement.missing_fringes import needed_fringes, no_fringe_caution
+from fringespan.judgement.missing_fringes import arc_or_streak, needed_fringes, no_fringe_caution, strongest_arc
 from fringespan.judgement.off_lattice import OFF_LATTICE
 from fringespan.judgement.peaks import fringe_counts
 from fringespan.judgement.pixel_signs import pixel_cautions, replaced_pixel_cautions
@@ -276,6 +276,10 @@ def region_cautions(
             said += scale_cautions(None, None, [c.code for c in micrograph.cautions], False)
         aspect = round(size[1] / size[0], 3) if size is not None else 1.0
         mean = pixels.unit * float(pixels.trend[0] + (pixels.trend[2] + pixels.trend[7]) / 3)
+        place = strongest_arc(spectrum, pixels.footprint, aspect)
+        if place is not None:
+            said.append(arc_or_streak(place, micrograph.geometry_nm_per_px))
+            return said
         needed = needed_fringes(spectrum, pixels.footprint, settings, aspect)
         said.append(no_fringe_caution(needed, size, mean, micrograph.dark_level))
         if is_lopsided(spectrum):

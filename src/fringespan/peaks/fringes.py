@@ -17,7 +17,7 @@ from fringespan.peaks.misfit import MISFIT_LIMIT, CellResiduals, cell_residuals,
 from fringespan.region import Footprint
 from fringespan.spectrum import PowerSpectrum, RegionPixels
 
-__all__ = ["Fringes", "find_fringes"]
+__all__ = ["Fringes", "close_pairs", "find_fringes"]
 
 _PIECE_BINS = 5.0
 _PIECE_RATIO = 0.2
@@ -142,6 +142,33 @@ def _fill_distances(ny, nx, frequency, others, out):  # type: ignore[no-untyped-
             out[j, k] = min(difference, total)
 
 
+def close_pairs(footprint: Footprint, fringes: Fringes) -> NDArray[np.bool_]:
+    """Say which waves are one of several close ones that together leave next to nothing over.
+
+    Each shows a beat in the field of the other, which is no sign of a bent or uneven crystal.
+
+    Parameters
+    ----------
+    footprint : Footprint
+        Of the region.
+    fringes : Fringes
+
+    Returns
+    -------
+    ndarray of bool, shape (n,)
+    """
+    frequency = fringes.fit.frequency
+    near = _distances(footprint, frequency, frequency) < _PIECE_BINS
+    np.fill_diagonal(near, False)
+    left = _left_over(fringes.residuals.misfit, fringes.fit.power_ratio)
+    return np.asarray(near.any(axis=1) & (left < _LEFT_OF_PAIR))
+
+
+def _left_over(misfit: NDArray[np.float64], power_ratio: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return the power that waves leave over against their own: the misfit is the mean of twelve projections."""
+    return np.asarray(12 * misfit / power_ratio)
+
+
 def _near_stronger(
     footprint: Footprint, frequency: NDArray[np.float64], stronger: NDArray[np.float64]
 ) -> NDArray[np.bool_]:
@@ -190,8 +217,7 @@ def _merged(
     for label in np.unique(group):
         members = np.flatnonzero(group == label)
         misfit = residuals.misfit[members].max()
-        # the misfit is the mean of twelve projections, so this is the power left over against that of the strongest
-        left = 12 * misfit / fit.power_ratio[members].max()
+        left = _left_over(misfit, fit.power_ratio[members].max())
         if len(members) == 1 or misfit <= MISFIT_LIMIT or left < _LEFT_OF_PAIR:
             continue
         strongest = members[fit.power_ratio[members].argmax()]
@@ -225,8 +251,12 @@ def _with_splits(
 ) -> tuple[JointFit, NDArray[np.float64], NDArray[np.float64], CellResiduals]:
     """Put two waves in place of each that misfits, where that leaves noise only."""
     footprint = pixels.footprint
-    # from the last to the first: the two new waves go to the end, so that earlier positions stay
-    for k in np.flatnonzero(residuals.misfit > MISFIT_LIMIT)[::-1]:
+    # which waves the first ones have become: others may go with one that is split
+    origin = np.arange(len(density))
+    for wave in np.flatnonzero(residuals.misfit > MISFIT_LIMIT)[::-1]:
+        if wave not in origin:
+            continue
+        k = np.flatnonzero(origin == wave)[0]
         shifts = split_wave(footprint, residuals, int(k), complex(fit.amplitude[k]), float(density[k]))
         if shifts is None:
             continue
@@ -235,10 +265,13 @@ def _with_splits(
         trial_density = np.concatenate([density[others], density[[k, k]]])
         trial_limit = np.concatenate([limit[others], limit[[k, k]]])
         trial, kept = fit_jointly(pixels, demodulate(pixels, frequency), trial_density, trial_limit)
-        if len(kept) < len(frequency):
+        # what the wrong wave had left over may have passed for others, which are gone now
+        if not np.isin([len(frequency) - 2, len(frequency) - 1], kept).all():
             continue
+        trial_density, trial_limit = trial_density[kept], trial_limit[kept]
+        trial_origin = np.append(origin[others], [-1, -1])[kept]
         trial_residuals = cell_residuals(footprint, trial, trial_density)
         if (trial_residuals.misfit[-2:] > MISFIT_LIMIT).any():
             continue
-        fit, density, limit, residuals = trial, trial_density, trial_limit, trial_residuals
+        fit, density, limit, residuals, origin = trial, trial_density, trial_limit, trial_residuals, trial_origin
     return fit, density, limit, residuals
