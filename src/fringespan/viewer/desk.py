@@ -6,14 +6,16 @@ What is drawn on the layers goes into the state; what is measured comes back as 
 from __future__ import annotations
 
 import weakref
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
+from numpy.typing import NDArray
 
 from fringespan.exceptions import FringespanError
+from fringespan.measurement import Measurement
 from fringespan.micrograph import Micrograph
 from fringespan.viewer.fringe_lines import dashes, fringe_lines
 from fringespan.viewer.layers import (
@@ -65,6 +67,7 @@ class Desk:
         self._picture: Image | None = None
         self._regions: Shapes | None = None
         self._lines: dict[str, Vectors] = {}
+        self._drawn: dict[str, tuple[Vectors, list[Any]]] = {}
         self._pixels: tuple[Any, int, Micrograph] | None = None
         self._writing = False
         self._connected = False
@@ -246,7 +249,7 @@ class Desk:
             for emitter in (events.scale, events.units, events.name, events.data, events.affine):
                 emitter.disconnect(self._on_frame)
         self._release_regions()
-        self._picture, self._lines = None, {}
+        self._picture, self._lines, self._drawn = None, {}, {}
 
     def _on_frame(self, event: Any = None) -> None:
         if not self._writing and self._picture is not None:
@@ -368,28 +371,37 @@ class Desk:
             return
         if not self.state.is_dragged and self._regions is not None:
             self._write_names([region.drawn for region in self.state.regions])
-        layer = self._lines.get(_CRYSTAL)
         micrograph = self.state.micrograph
-        if layer is not None and micrograph is not None:
-            outlines = [
-                dashes(region.measurement.crystal_outline_px, _DASH_SHARE * max(micrograph.shape))
-                for region in self.state.regions
-                if region.measurement is not None and region.measurement.crystal_outline_px is not None
-            ]
-            show_lines(layer, np.concatenate(outlines) if outlines else np.empty((0, 2, 2)))
+        if micrograph is not None:
+            extents = [_own_extent(region.measurement) for region in self.state.regions]
+            outlines = [extent for extent in extents if extent is not None]
+            dash = _DASH_SHARE * max(micrograph.shape)
+            self._show_lines(_CRYSTAL, outlines, lambda: [dashes(outline, dash) for outline in outlines])
         self._draw_fringes()
 
     def _draw_fringes(self) -> None:
-        layer = self._lines.get(_FRINGES)
-        if layer is None or self._writing:
+        if self._writing:
             return
-        region, peak = self.state.current, self.state.peak
-        ends = np.empty((0, 2, 2))
-        if region is not None and region.measurement is not None and peak is not None:
-            outline = region.measurement.crystal_outline_px
-            corners = region.drawn.vertices_px if outline is None else outline
-            ends = fringe_lines(region.measurement.peaks[peak], corners)
-        show_lines(layer, ends)
+        region, index = self.state.current, self.state.peak
+        if region is None or region.measurement is None or index is None:
+            self._show_lines(_FRINGES, [], list)
+            return
+        measurement = region.measurement
+        outline, peak = measurement.crystal_outline_px, measurement.peaks[index]
+        corners = np.array(measurement.region.vertices_px) if outline is None else outline
+        self._show_lines(_FRINGES, [peak], lambda: [fringe_lines(peak, corners)])
+
+    def _show_lines(self, name: str, shown: list[Any], lines: Callable[[], list[NDArray[np.float64]]]) -> None:
+        """Draw lines, unless those of the same objects are there: setting a layer's data costs napari tens of ms."""
+        layer = self._lines.get(name)
+        if layer is None:
+            return
+        before = self._drawn.get(name)
+        if before is not None and before[0] is layer and _are_the_same(before[1], shown):
+            return
+        self._drawn[name] = (layer, shown)
+        if shown or len(layer.data):
+            show_lines(layer, np.concatenate(lines()) if shown else np.empty((0, 2, 2)))
 
     @contextmanager
     def _quietly(self) -> Iterator[None]:
@@ -399,6 +411,17 @@ class Desk:
             yield
         finally:
             self._writing = before
+
+
+def _own_extent(measurement: Measurement | None) -> NDArray[np.float64] | None:
+    """Return where the crystal of a region ends; None where it fills the region, whose outline is there already."""
+    if measurement is None or measurement.in_pixels is None or not measurement.in_pixels.found.uneven:
+        return None
+    return measurement.crystal_outline_px
+
+
+def _are_the_same(some: list[Any], others: list[Any]) -> bool:
+    return len(some) == len(others) and all(one is other for one, other in zip(some, others, strict=True))
 
 
 def _stored(layer: Image) -> Any:

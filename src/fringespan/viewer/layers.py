@@ -366,10 +366,10 @@ def name_regions(layer: Shapes, regions: Sequence[DrawnRegion], labels: dict[int
         colours = [REGION_COLOURS[(n - 1) % len(REGION_COLOURS)] if n else LINE_COLOUR for n in numbers]
         if colours:
             layer.edge_color = colours
-    following = int(layer.metadata[METADATA_KEY].get("last id", 0))
-    layer.current_edge_color = (
-        REGION_COLOURS[following % len(REGION_COLOURS)] if not layer.selected_data else (layer.current_edge_color)
-    )
+    if not layer.selected_data:
+        # napari gives a new current colour to all shapes that are selected
+        following = int(layer.metadata[METADATA_KEY].get("last id", 0))
+        layer.current_edge_color = REGION_COLOURS[following % len(REGION_COLOURS)]
 
 
 # --- lines that show results ---------------------------------------------------------------------------------------

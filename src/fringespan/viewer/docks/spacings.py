@@ -185,10 +185,19 @@ class SpacingsDock(Dock):
 
     def _on_measured(self, region_id: int) -> None:
         current = self._state.current
-        if current is not None and current.drawn.id == region_id:
+        if current is not None and current.drawn.id == region_id and self._is_new(current):
             self._show()
 
+    def _is_new(self, region: MeasuredRegion) -> bool:
+        """Whether a region shows other values than those on the screen: an outline that only waits does not."""
+        now = (region.measurement, region.problem, region.rows)
+        return any(one is not other for one, other in zip(now, self._shown, strict=True))
+
+    _shown: tuple[object, object, object] = (None, None, ())
+
     def _show(self) -> None:
+        current = self._state.current
+        self._shown = (None, None, ()) if current is None else (current.measurement, current.problem, current.rows)
         self._choosing = True
         self.model.refresh()
         self._choosing = False
