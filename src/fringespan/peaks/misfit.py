@@ -116,11 +116,18 @@ def _subtract_outline(spans, edges_y, edges_x, cell_x, ny, nx, fy, fx, amplitude
         prefix[x + 1] = prefix[x] + wave
         wave *= turn
     cy = 0
+    row = -1
+    down = np.exp(2j * np.pi * fy)
     for k in range(spans.shape[0]):
         y, x0, x1 = spans[k, 0], spans[k, 1], spans[k, 2]
         while y >= edges_y[cy + 1]:
             cy += 1
-        wave = amplitude * np.exp(2j * np.pi * fy * (y - (ny - 1) / 2))
+        # from row to row a product will do; now and then afresh, so that rounding does not add up
+        if y == row + 1 and y % 32 != 0:
+            wave *= down
+        elif y != row:
+            wave = amplitude * np.exp(2j * np.pi * fy * (y - (ny - 1) / 2))
+        row = y
         for cx in range(cell_x[x0], cell_x[x1 - 1] + 1):
             out[cy, cx] -= wave * (prefix[min(x1, edges_x[cx + 1])] - prefix[max(x0, edges_x[cx])])
 
