@@ -599,6 +599,7 @@ RAMPS = [
         27.6,
         np.float32,
         id="rounded by single precision",
+        marks=pytest.mark.xfail(strict=True, reason="fits of what is no plane wave run beyond the finest fringes"),
     ),
     pytest.param(398.43, np.uint64, id="rounded to whole numbers"),
     pytest.param(0.31, np.float64, id="hardly rounded"),
