@@ -68,6 +68,7 @@ def test_without_the_viewer_it_says_what_to_install_before_it_writes(run, tmp_pa
 
 
 def test_the_viewer_opens_on_the_picture_that_was_written(run, tmp_path, monkeypatch):
+    pytest.importorskip("napari")
     shown = []
     monkeypatch.setattr("fringespan.command_line.demo.show", lambda *arguments: shown.append(arguments))
     assert run("demo", "--out", tmp_path / "demo", "--view").exit_code == 0

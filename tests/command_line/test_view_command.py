@@ -11,11 +11,13 @@ def shown(monkeypatch):
 
 
 def test_the_viewer_opens_with_nothing_in_it(run, shown):
+    pytest.importorskip("napari")
     assert run("view").exit_code == 0
     assert shown == [(None, (), None)]
 
 
 def test_the_picture_comes_with_what_was_said_of_it(run, shown, picture):
+    pytest.importorskip("napari")
     arguments = ("--pixel-size", "0.021", "--pixel-size-uncertainty", "1.5", "--voltage", "300")
     assert run("view", picture, *arguments, "--region", "A: 10,10 10,90 90,90").exit_code == 0
     ((micrograph, regions, path),) = shown

@@ -327,7 +327,10 @@ BROKEN = [
     pytest.param(("settings",), {"false_peaks_per_region": True}, "must be a number", id="setting of truth"),
     pytest.param(("regions",), None, "regions", id="no regions"),
     pytest.param(
-        ("regions", 0, "vertices_px"), [[0, 0], [5, 5], [0, 5], [5, 0]], "encloses no area", id="outline of no area"
+        ("regions", 0, "vertices_px"),
+        [[0, 0], [5, 5], [0, 5], [5, 0]],
+        "crosses or touches itself",
+        id="crossed outline",
     ),
     pytest.param(("regions", 0, "vertices_px"), [[0, 0], [5, 5]], "vertices_px", id="outline of two corners"),
     pytest.param(("regions", 0, "peaks", 0, "period_px"), "x", r"regions\[0\]\.peaks\[0\]\.period_px", id="text"),
