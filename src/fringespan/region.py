@@ -8,7 +8,6 @@ from dataclasses import dataclass
 from functools import cached_property, lru_cache
 from typing import Literal, cast, get_args
 
-import numba
 import numpy as np
 from numpy.typing import NDArray
 
@@ -291,9 +290,15 @@ def _inside(corners: NDArray[np.float64], shape: tuple[int, int]) -> NDArray[np.
     start, end = corners, np.roll(corners, -1, axis=0)
     sloped = start[:, 0] != end[:, 0]
     start, end = start[sloped], end[sloped]
+    top, bottom = np.minimum(start[:, 0], end[:, 0]), np.maximum(start[:, 0], end[:, 0])
+    slope = (end[:, 1] - start[:, 1]) / (end[:, 0] - start[:, 0])
+    y = np.arange(height)[:, None]
     runs = []
-    for below in (False, True):
-        row, x = _crossings(start, end, height, below)
+    for crossed in ((top <= y) & (y < bottom), (top < y) & (y <= bottom)):
+        row, edge = np.nonzero(crossed)
+        x = start[edge, 1] + slope[edge] * (y[row, 0] - start[edge, 0])
+        order = np.lexsort((x, row))
+        row, x = row[order], x[order]
         first = np.clip(np.ceil(x[0::2] - _ON_OUTLINE).astype(np.int64), 0, width)
         stop = np.clip(np.floor(x[1::2] + _ON_OUTLINE).astype(np.int64) + 1, 0, width)
         runs.append(np.stack([row[0::2], first, stop], axis=1)[first < stop])
@@ -309,38 +314,6 @@ def _inside(corners: NDArray[np.float64], shape: tuple[int, int]) -> NDArray[np.
     joined = both[begins]
     joined[:, 2] = reach[last] - joined[:, 0] * (width + 2)
     return joined
-
-
-@numba.njit(cache=True, nogil=True)
-def _crossings(start, end, height, below):  # type: ignore[no-untyped-def]
-    """Return row and column of every crossing of edges with rows, sorted; of an edge's two ends the lower one counts.
-
-    With `below`, the upper one: rows are then looked at just below themselves in coordinate, not just above.
-    """
-    count = np.zeros(height + 1, np.int64)
-    row = np.empty(0, np.int64)
-    x = np.empty(0)
-    for turn in range(2):
-        if turn == 1:
-            first = np.cumsum(count) - count
-            row, x = np.empty(count.sum(), np.int64), np.empty(count.sum())
-            count[:] = 0
-        for k in range(start.shape[0]):
-            y0, x0, y1, x1 = start[k, 0], start[k, 1], end[k, 0], end[k, 1]
-            top, bottom = min(y0, y1), max(y0, y1)
-            # clipped before they become whole numbers, which corners far outside would overflow
-            for y in range(int(max(np.floor(top), 0.0)), int(min(np.floor(bottom) + 2, height))):
-                if (top < y <= bottom) if below else (top <= y < bottom):
-                    if turn == 1:
-                        value = x0 + (x1 - x0) / (y1 - y0) * (y - y0)
-                        place = first[y] + count[y]
-                        while place > first[y] and x[place - 1] > value:
-                            x[place] = x[place - 1]
-                            place -= 1
-                        x[place] = value
-                        row[first[y] + count[y]] = y
-                    count[y] += 1
-    return row, x
 
 
 def _narrowest(spans: NDArray[np.int32]) -> float:

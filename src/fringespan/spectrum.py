@@ -196,50 +196,46 @@ def _interpolate_window(coarse, step, spans, window, sums, squares):  # type: ig
     """Write the window, interpolated by Catmull-Rom cubics, at the pixels of the spans, and its sums over blocks."""
     nx = window.shape[1]
     height, width = coarse.shape
-    # outside the grid the window is zero: two points before it and two after
-    line = np.zeros(width + 4, np.float32)
+    line = np.empty(width + 3, np.float32)
     column = np.empty(nx, np.int32)
     weights = np.empty((4, nx), np.float32)
     for x in range(nx):
         p = (x + 0.5) / step - 0.5
         j = int(np.floor(p))
-        column[x] = j + 1
-        _catmull_rom(p - j, weights[:, x])
-    down = np.empty(4, np.float32)
+        f = p - j
+        column[x] = j
+        weights[0, x] = -0.5 * f + f * f - 0.5 * f * f * f
+        weights[1, x] = 1 - 2.5 * f * f + 1.5 * f * f * f
+        weights[2, x] = 0.5 * f + 2 * f * f - 1.5 * f * f * f
+        weights[3, x] = -0.5 * f * f + 0.5 * f * f * f
     for k in range(spans.shape[0]):
         y, x0, x1 = spans[k, 0], spans[k, 1], spans[k, 2]
         p = (y + 0.5) / step - 0.5
         i = int(np.floor(p))
-        _catmull_rom(p - i, down)
+        f = p - i
+        a = -0.5 * f + f * f - 0.5 * f * f * f
+        b = 1 - 2.5 * f * f + 1.5 * f * f * f
+        c = 0.5 * f + 2 * f * f - 1.5 * f * f * f
+        d = -0.5 * f * f + 0.5 * f * f * f
         line[:] = np.float32(0)
-        for m in range(4):
-            row = i - 1 + m
+        for m in range(-1, 3):
+            row = i + m
+            # outside the grid the window is zero
             if 0 <= row < height:
+                w = np.float32(a if m == -1 else (b if m == 0 else (c if m == 1 else d)))
                 for j in range(width):
-                    line[j + 2] += down[m] * coarse[row, j]
-        target = window[y]
+                    line[j + 1] += w * coarse[row, j]
         for x in range(x0, x1):
             j = column[x]
-            value = weights[0, x] * line[j] + weights[1, x] * line[j + 1]
-            value += weights[2, x] * line[j + 2] + weights[3, x] * line[j + 3]
-            target[x] = max(value, np.float32(0.002))
-        for j in range(x0 // step, (x1 - 1) // step + 1):
-            total = np.float32(0)
-            squared = np.float32(0)
-            for x in range(max(x0, j * step), min(x1, (j + 1) * step)):
-                total += target[x]
-                squared += target[x] * target[x]
-            sums[y // step, j] += total
-            squares[y // step, j] += squared
-
-
-@numba.njit(cache=True, nogil=True)
-def _catmull_rom(f, weights):  # type: ignore[no-untyped-def]
-    """Fill in the weights of the four points around a fraction f between the middle two."""
-    weights[0] = -0.5 * f + f * f - 0.5 * f * f * f
-    weights[1] = 1 - 2.5 * f * f + 1.5 * f * f * f
-    weights[2] = 0.5 * f + 2 * f * f - 1.5 * f * f * f
-    weights[3] = -0.5 * f * f + 0.5 * f * f * f
+            value = np.float32(0)
+            for m in range(4):
+                place = j + m
+                if 0 <= place < width + 2:
+                    value += weights[m, x] * line[place]
+            value = max(value, np.float32(0.002))
+            window[y, x] = value
+            sums[y // step, x // step] += value
+            squares[y // step, x // step] += value * value
 
 
 # --- the slow trend ------------------------------------------------------------------------------------------------

@@ -51,7 +51,6 @@ _BRIGHT_LINE = 8.0
 """A line through the centre over its neighbours; crystals alone reach 3."""
 
 _SAMPLES = 96
-_MOST_ROWS = 200
 _LARGEST_SAMPLE = 40_000
 _LOPSIDED = 1.7
 """Limit of `lopsidedness`; simulated films without astigmatism or drift, 96 to 1024 px wide, stay below 1.2."""
@@ -96,18 +95,14 @@ def _places(shape: tuple[int, int]) -> NDArray[np.int32]:
     ny, nx = shape
     columns = nx // 2 + 1
     random = np.random.default_rng(ny * 65537 + nx)
-    # some rows hold enough of the first two groups
-    rows = np.arange(ny) if ny <= _MOST_ROWS else np.sort(random.choice(ny, _MOST_ROWS, replace=False))
-    row = np.fft.fftfreq(ny)[rows, None]
+    row = np.fft.fftfreq(ny)[:, None]
     column = np.arange(columns)[None] / nx
     radius = np.hypot(row, column)
     off_axes = (np.abs(row) * ny > 3.5) & (column * nx > 3.5)
     middle = (radius > 0.08) & (radius < 0.2)
     # the spectrum of the smallest regions has no bin there that is off the axes
     middle = middle & off_axes if (middle & off_axes).any() else middle
-    groups = [
-        rows[i] * columns + j for i, j in (np.nonzero((np.abs(row) > 0.43) & (column > 0.43)), np.nonzero(middle))
-    ]
+    groups = [np.flatnonzero(((np.abs(row) > 0.43) & (column > 0.43)).ravel()), np.flatnonzero(middle.ravel())]
     beside = 12
     along_rows = np.arange(8, ny - 7)
     along_columns = np.arange(8, columns - 1)

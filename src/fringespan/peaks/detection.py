@@ -99,15 +99,16 @@ class _MatchedFilter:
 @lru_cache(maxsize=32)
 def _matched_filter(footprint: Footprint) -> _MatchedFilter:
     """Return filters h with T = |h^H z|^2 / S for the 7 x 7 bins z around a maximum, one row per sub-bin offset."""
-    bins = np.arange(-3.0, 4.0)
+    bins = np.arange(-3, 4)
 
     def responses(offsets: NDArray[np.float64]) -> NDArray[np.complex128]:
-        grid = window_transform(footprint, (offsets, -bins), (offsets, -bins), power=1)
+        shift = (offsets[:, None] - bins[None]).ravel()
+        grid = window_transform(footprint, shift, shift, power=1)
         n = offsets.size
         return grid.reshape(n, 7, n, 7).transpose(0, 2, 1, 3).reshape(n * n, 49)
 
-    lags = np.zeros(1), -np.arange(-6, 7).astype(float)
-    lag = window_transform(footprint, lags, lags, power=2)
+    lags = np.arange(-6, 7).astype(float)
+    lag = window_transform(footprint, -lags, -lags, power=2)
     row, column = np.divmod(np.arange(49), 7)
     covariance = lag[row[:, None] - row[None] + 6, column[:, None] - column[None] + 6]
     covariance += 1e-5 * covariance[0, 0].real * np.eye(49)
@@ -125,31 +126,23 @@ def _matched_filter(footprint: Footprint) -> _MatchedFilter:
     return _MatchedFilter(filters(_COARSE), filters(_FINE))
 
 
-_Shifts = tuple[NDArray[np.float64], NDArray[np.float64]]
-"""Shifts in bins, every value of the first added to every value of the second."""
-
-
 def window_transform(
-    footprint: Footprint, row_shifts: _Shifts, column_shifts: _Shifts, *, power: int
+    footprint: Footprint, row_shift: NDArray[np.float64], column_shift: NDArray[np.float64], *, power: int
 ) -> NDArray[np.complex128]:
     """Return sum(w^power * exp(2 pi i (sy y / Ny + sx x / Nx))) for every pair of shifts, in bins, from pixel (0, 0)."""
     window = taper(footprint)
     ny, nx = footprint.shape
     transform_rows, transform_columns = window.transform_shape
     if window.oblique is None:
+        y, x = np.arange(ny), np.arange(nx)
         wy, wx = window.rows.astype(float) ** power, window.columns.astype(float) ** power
-        rows = _turns(row_shifts, np.arange(ny) / transform_rows) @ wy
-        columns = _turns(column_shifts, np.arange(nx) / transform_columns) @ wx
+        rows = np.exp(2j * np.pi / transform_rows * np.outer(row_shift, y)) @ wy
+        columns = np.exp(2j * np.pi / transform_columns * np.outer(column_shift, x)) @ wx
         return np.outer(rows, columns)
-    rows = _turns(row_shifts, window.coarse_y / transform_rows)
-    columns = _turns(column_shifts, window.coarse_x / transform_columns)
-    return np.asarray((rows @ window.coarse[power - 1]) @ columns.T)
-
-
-def _turns(shifts: _Shifts, place: NDArray[np.float64]) -> NDArray[np.complex128]:
-    """Return exp(2 pi i shift place), one row per shift; products save most of the exponentials."""
-    first, second = (np.exp(2j * np.pi * np.outer(shift, place)) for shift in shifts)
-    return np.asarray(first[:, None] * second[None]).reshape(-1, len(place))
+    sums = window.coarse[power - 1]
+    rows = np.exp(2j * np.pi / transform_rows * np.outer(row_shift, window.coarse_y))
+    columns = np.exp(2j * np.pi / transform_columns * np.outer(column_shift, window.coarse_x))
+    return np.asarray((rows @ sums) @ columns.T)
 
 
 @lru_cache(maxsize=32)
@@ -646,13 +639,8 @@ def _window_response(footprint: Footprint) -> _WindowResponse:
         )
     reach = 8
     shift = np.arange(-8 * (reach + 2), 8 * (reach + 2) + 1) / 8
-    eighths = np.arange(8) / 8
-    # shifts not below zero; the window is real, so that the others are their conjugates
-    half = window_transform(
-        footprint, (np.arange(reach + 3.0), eighths), (np.arange(-reach - 2.0, reach + 3.0), eighths), power=1
-    )[: len(shift) // 2 + 1, : len(shift)]
-    plane = np.concatenate([half[:0:-1, ::-1].conj(), half])
-    plane *= np.exp(-2j * np.pi * shift * middle[0])[:, None] * np.exp(-2j * np.pi * shift * middle[1])
+    plane = window_transform(footprint, shift, shift, power=1)
+    plane *= np.exp(-2j * np.pi * (shift[:, None] * middle[0] + shift[None] * middle[1]))
     return _WindowResponse(np.empty(0), np.empty(0), plane, reach)
 
 
