@@ -102,7 +102,7 @@ def find_fringes(
         fit, density, limit, residuals = _with_splits(pixels, fit, density, limit, residuals)
         fit, density, limit, residuals = _merged(pixels, fit, density, limit, residuals)
     # a fit of what is no plane wave may leave the spectrum; real fringes do so by a fraction of a bin at most
-    inside = (np.abs(fit.frequency) <= 0.5 + 0.5 / np.array(footprint.shape)).all(axis=1)
+    inside = np.asarray((np.abs(fit.frequency) <= 0.5 + 0.5 / np.array(footprint.shape)).all(axis=1))
     if not inside.all():
         fit, kept = fit_jointly(pixels, fit.demodulation.part(inside), density[inside], limit[inside])
         density, limit = density[inside][kept], limit[inside][kept]
