@@ -68,7 +68,10 @@ def _line_sums(n, frequency, out):  # type: ignore[no-untyped-def]
     turns = np.rint(frequency)
     f = frequency - turns
     a = np.pi * f
-    if abs(n * a) < 1.0:
+    if a == 0:
+        # each wave against itself
+        s0, s1, s2 = float(n), 0.0, n * (n * n - 1.0) / 12
+    elif abs(n * a) < 1.0:
         s0 = 0.0
         s1 = 0.0
         s2 = 0.0
