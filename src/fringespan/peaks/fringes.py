@@ -23,8 +23,11 @@ _PIECE_BINS = 5.0
 _PIECE_RATIO = 0.2
 """A peak nearer than this to another, and weaker than this share of it, is a piece of it: the skirt of its envelope."""
 
-_LEFT_OF_PAIR = 0.02
-"""Share of the power that near waves may leave over: pairs leave 0.003 at most, parts of a bent fringe 0.06 at least."""
+_LEFT_OF_PAIR = 0.03
+"""Share of the power that near waves may leave over: pairs leave 0.003 at most, parts of a bent fringe 0.05 at least."""
+
+_CHANCE = 3.0
+"""Misfit of near waves that may be chance: it must not make one wave of a pair. Of 12 000 waves in noise 2 exceed it."""
 
 _STRONG = 4.0
 """A fringe this many times above the detection threshold is fitted before weaker ones are looked for."""
@@ -166,13 +169,12 @@ def close_pairs(footprint: Footprint, fringes: Fringes) -> NDArray[np.bool_]:
     frequency = fringes.fit.frequency
     near = _distances(footprint, frequency, frequency) < _PIECE_BINS
     np.fill_diagonal(near, False)
-    left = _left_over(fringes.residuals.misfit, fringes.fit.power_ratio)
-    return np.asarray(near.any(axis=1) & (left < _LEFT_OF_PAIR))
+    return np.asarray(near.any(axis=1) & _leave_noise(fringes.residuals.misfit, fringes.fit.power_ratio))
 
 
-def _left_over(misfit: NDArray[np.float64], power_ratio: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Return the power that waves leave over against their own: the misfit is the mean of twelve projections."""
-    return np.asarray(12 * misfit / power_ratio)
+def _leave_noise(misfit: NDArray[np.float64], power_ratio: NDArray[np.float64]) -> NDArray[np.bool_]:
+    """Say which waves leave noise only, or next to nothing of their power: the misfit is the mean of twelve projections."""
+    return np.asarray((misfit < _CHANCE) | (12 * (misfit - 1) < _LEFT_OF_PAIR * power_ratio))
 
 
 def _near_stronger(
@@ -222,9 +224,7 @@ def _merged(
     stays, frequency = np.ones(n, bool), fit.frequency.copy()
     for label in np.unique(group):
         members = np.flatnonzero(group == label)
-        misfit = residuals.misfit[members].max()
-        left = _left_over(misfit, fit.power_ratio[members].max())
-        if len(members) == 1 or misfit <= MISFIT_LIMIT or left < _LEFT_OF_PAIR:
+        if len(members) == 1 or _leave_noise(residuals.misfit[members].max(), fit.power_ratio[members].max()):
             continue
         strongest = members[fit.power_ratio[members].argmax()]
         stays[members] = False
